@@ -1,0 +1,8 @@
+"""Differentiable building blocks for fitting noisy coupled oscillators to recordings."""
+
+from importlib.metadata import version as _version
+
+from . import parameters as parameters
+
+
+__version__ = _version("oscillib")
