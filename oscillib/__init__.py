@@ -2,7 +2,13 @@
 
 from importlib.metadata import version as _version
 
-from . import parameters as parameters
+from . import (
+    fields as fields,
+    integrate as integrate,
+    losses as losses,
+    observe as observe,
+    parameters as parameters,
+)
 
 
 __version__ = _version("oscillib")

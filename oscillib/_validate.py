@@ -11,15 +11,16 @@ from typing import Any
 import jax
 import jax.numpy as jnp
 import numpy as np
+from jax.core import Tracer
 
 
 def is_concrete(*arrays: Any) -> bool:
     """Tell whether the values of all arrays are known now (none is a tracer)."""
-    return not any(isinstance(a, jax.core.Tracer) for a in arrays)
+    return not any(isinstance(a, Tracer) for a in arrays)
 
 
 def as_float(x: Any) -> jax.Array:
-    """Convert to a strongly typed floating array: floats keep their dtype, the rest get the default.
+    """Convert to a strongly typed float array: floats keep their dtype, others get the default.
 
     A weakly typed scalar would make a compiled function trace again for the first strong one.
     """
@@ -79,8 +80,8 @@ def check_values(name: str, x: Any, good: Callable[[Any], Any], expected: str) -
     if not is_concrete(x):
         return
     x = np.asarray(x)
-    bad = np.argwhere(~np.asarray(good(x), dtype=bool))
-    if bad.size or (x.ndim == 0 and not bool(good(x))):
-        index = tuple(int(i) for i in bad[0]) if x.ndim else ()
-        where = f" at index {index if len(index) > 1 else index[0]}" if index else ""
+    bad = np.argwhere(~np.asarray(good(x), dtype=bool).reshape(x.shape))
+    if len(bad):
+        index = tuple(int(i) for i in bad[0])
+        where = f" at index {', '.join(map(str, index))}" if index else ""
         raise ValueError(f"`{name}` must be {expected}; got {x[index]}{where}.")

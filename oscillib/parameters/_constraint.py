@@ -2,6 +2,7 @@
 
 import dataclasses
 from abc import ABC, abstractmethod
+from typing import Any
 
 import jax
 import jax.numpy as jnp
@@ -21,7 +22,7 @@ class Constraint(ABC):
         """Map an allowed value to the unconstrained array."""
 
     @abstractmethod
-    def to_value(self, free: Array | None, template: Array) -> Array:
+    def to_value(self, free: Any, template: Array) -> Array:
         """Map the unconstrained array back; `template` is a value with the right shape."""
 
 
@@ -30,6 +31,8 @@ class Free(Constraint):
     """Any real value: the identity.
 
     Example:
+        >>> import jax.numpy as jnp
+        >>> from oscillib.parameters import Free
         >>> Free().to_free(jnp.array([-1.0]))
         Array([-1.], dtype=float64)
     """
@@ -38,9 +41,8 @@ class Free(Constraint):
         """Return `value`."""
         return value
 
-    def to_value(self, free: Array | None, template: Array) -> Array:
+    def to_value(self, free: Any, template: Array) -> Array:
         """Return `free`."""
-        assert free is not None
         return free
 
 
@@ -49,6 +51,8 @@ class Fixed(Constraint):
     """Not fitted: the free leaf is `None` and the template's value comes back.
 
     Example:
+        >>> import jax.numpy as jnp
+        >>> from oscillib.parameters import Fixed
         >>> print(Fixed().to_free(jnp.array([2.0])))
         None
     """
@@ -57,7 +61,7 @@ class Fixed(Constraint):
         """Return `None`: there is nothing to fit."""
         del value
 
-    def to_value(self, free: Array | None, template: Array) -> Array:
+    def to_value(self, free: Any, template: Array) -> Array:
         """Return `template`."""
         del free
         return template
@@ -70,6 +74,8 @@ class Positive(Constraint):
     A step of the free leaf is a relative change of the value, whatever its unit.
 
     Example:
+        >>> import jax.numpy as jnp
+        >>> from oscillib.parameters import Positive
         >>> Positive().to_free(jnp.array([1.0]))
         Array([0.], dtype=float64)
     """
@@ -78,7 +84,7 @@ class Positive(Constraint):
         """Return `log(value)`."""
         return jnp.log(value)
 
-    def to_value(self, free: Array | None, template: Array) -> Array:
+    def to_value(self, free: Any, template: Array) -> Array:
         """Return `exp(free)`."""
         return jnp.exp(free)
 
@@ -95,6 +101,8 @@ class Interval(Constraint):
         ValueError: `upper` is not above `lower`.
 
     Example:
+        >>> import jax.numpy as jnp
+        >>> from oscillib.parameters import Interval
         >>> Interval(0.0, 4.0).to_free(jnp.array([2.0]))
         Array([0.], dtype=float64)
     """
@@ -113,7 +121,7 @@ class Interval(Constraint):
         """Return the logit of the position within the interval."""
         return jnp.log(value - self.lower) - jnp.log(self.upper - value)
 
-    def to_value(self, free: Array | None, template: Array) -> Array:
+    def to_value(self, free: Any, template: Array) -> Array:
         """Return the point of the interval at `sigmoid(free)`."""
         return self.lower + (self.upper - self.lower) * jax.nn.sigmoid(free)
 
@@ -126,6 +134,8 @@ class OffDiagonal(Constraint):
     directions. The free array has shape `(node * (node - 1),)`.
 
     Example:
+        >>> import jax.numpy as jnp
+        >>> from oscillib.parameters import OffDiagonal
         >>> OffDiagonal().to_free(jnp.array([[0.0, 2.0], [3.0, 0.0]]))
         Array([2., 3.], dtype=float64)
     """
@@ -134,7 +144,7 @@ class OffDiagonal(Constraint):
         """Return the entries off the diagonal, row by row."""
         return value[_off_diagonal(value.shape[0])]
 
-    def to_value(self, free: Array | None, template: Array) -> Array:
+    def to_value(self, free: Any, template: Array) -> Array:
         """Return the matrix with `free` off the diagonal and zeros on it."""
         return jnp.zeros_like(template).at[_off_diagonal(template.shape[0])].set(free)
 

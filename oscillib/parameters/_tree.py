@@ -4,6 +4,7 @@ from typing import TypeVar
 
 import jax
 import jax.numpy as jnp
+from jax.core import Tracer
 from jaxtyping import Array, Bool, PyTree
 
 from ._constraint import Constraint
@@ -28,14 +29,15 @@ def unconstrain(params: PyTree, constraints: PyTree) -> PyTree:
             outside its constraint.
 
     Example:
-        >>> from oscillib.parameters import Fixed, Positive
+        >>> import jax.numpy as jnp
+        >>> from oscillib.parameters import Fixed, Positive, unconstrain
         >>> unconstrain({"a": jnp.ones(2), "b": jnp.ones(())}, {"a": Positive(), "b": Fixed()})
         {'a': Array([0., 0.], dtype=float64), 'b': None}
     """
     _check_structure(params, constraints)
     free = jax.tree.map(lambda c, p: c.to_free(p), constraints, params)
     for path, leaf in jax.tree_util.tree_leaves_with_path(free):
-        if not isinstance(leaf, jax.core.Tracer) and not bool(jnp.all(jnp.isfinite(leaf))):
+        if not isinstance(leaf, Tracer) and not bool(jnp.all(jnp.isfinite(leaf))):
             name = jax.tree_util.keystr(path)
             raise ValueError(
                 f"`params{name}` must lie strictly inside its constraint; its unconstrained value "
@@ -59,7 +61,8 @@ def constrain(free: PyTree, constraints: PyTree, params: P) -> P:
         ValueError: `params` and `constraints` differ in structure.
 
     Example:
-        >>> from oscillib.parameters import Fixed, Positive
+        >>> import jax.numpy as jnp
+        >>> from oscillib.parameters import Fixed, Positive, constrain, unconstrain
         >>> p, c = {"a": jnp.ones(2), "b": jnp.ones(())}, {"a": Positive(), "b": Fixed()}
         >>> constrain(unconstrain(p, c), c, p)
         {'a': Array([1., 1.], dtype=float64), 'b': Array(1., dtype=float64)}
@@ -86,6 +89,8 @@ def all_finite(tree: PyTree) -> Bool[Array, ""]:
         A boolean scalar; usable inside `jit`.
 
     Example:
+        >>> import jax.numpy as jnp
+        >>> from oscillib.parameters import all_finite
         >>> bool(all_finite({"a": jnp.array([1.0, jnp.nan])}))
         False
     """

@@ -1,0 +1,3 @@
+"""From states to channels: readouts `readout(y, params)` of one state."""
+
+from ._linear import ReadoutParams as ReadoutParams, linear_readout as linear_readout
