@@ -1,7 +1,7 @@
 """Recordings of unequal length, padded to a few lengths so that little has to be compiled."""
 
 from collections.abc import Sequence
-from typing import NamedTuple
+from typing import Any, NamedTuple
 
 import jax
 import jax.numpy as jnp
@@ -60,27 +60,21 @@ def pad(recording: Recording, length: int) -> Recording:
         ([0.0, 0.5, 1.0, 1.5], [True, True, False, False])
     """
     check_recording("recording", recording)
-    times, n = recording.times, recording.times.shape[0]
-    extra = check_count("length", length, least=n) - n
-    step = (times[-1] - times[0]) / (n - 1) if n > 1 else jnp.ones_like(times[0])
-    added = times[-1] + step * jnp.arange(1, extra + 1, dtype=times.dtype)
-    times = jnp.concatenate([times, added])
-    check_times("recording.times, continued,", times)
-    rows = ((0, extra), (0, 0))
-    return Recording(
-        times,
-        jnp.pad(recording.values, rows),
-        jnp.pad(recording.mask, rows),
-        recording.channels,
-    )
+    # Known recordings are padded on the host, where a new length compiles nothing.
+    if is_concrete(*jax.tree.leaves(recording)):
+        times, values, mask = _padded(np, jax.tree.map(np.asarray, recording), length)
+        check_times("recording.times, continued,", times)
+    else:
+        times, values, mask = _padded(jnp, recording, length)
+    return Recording(jnp.asarray(times), jnp.asarray(values), jnp.asarray(mask), recording.channels)
 
 
 def bucket(recordings: Sequence[Recording], *, max_shapes: int = 3) -> Buckets:
     """Group recordings by length, pad and stack each group, with as little padding as possible.
 
     A compiled function compiles once for each length. The lengths are those that make the total
-    number of padded rows least, found exactly by dynamic programming over the sorted lengths;
-    host-side in its choice, so call it outside `jit`.
+    number of padded rows least, found exactly by dynamic programming over the sorted lengths.
+    Host-side: call it once, outside `jit`.
 
     Arguments:
         recordings: recordings with the same channels and dtype, at least one.
@@ -92,7 +86,7 @@ def bucket(recordings: Sequence[Recording], *, max_shapes: int = 3) -> Buckets:
         fraction of rows that are padding.
 
     Raises:
-        TypeError: an entry is no `Recording`; dtypes differ; `max_shapes` is no Python int.
+        TypeError: an entry is no `Recording`, or is traced; dtypes differ; `max_shapes` is no int.
         ValueError: no recordings, an entry that is a stack, other channels than the first's, or
             `max_shapes` below 1.
 
@@ -113,10 +107,25 @@ def bucket(recordings: Sequence[Recording], *, max_shapes: int = 3) -> Buckets:
     for longest in _best_lengths(lengths, max_shapes):
         indices = np.flatnonzero((lengths > shortest) & (lengths <= longest)).tolist()
         padded = [pad(recordings[i], longest) for i in indices]
-        groups.append(Group(jax.tree.map(lambda *xs: jnp.stack(xs), *padded), tuple(indices)))
+        stack = jax.tree.map(lambda *xs: jnp.asarray(np.stack(xs)), *padded)
+        groups.append(Group(stack, tuple(indices)))
         shortest = longest
     rows = sum(g.recordings.times.size for g in groups)
     return Buckets(groups, 1 - int(lengths.sum()) / rows)
+
+
+def _padded(xp: Any, recording: Recording, length: int) -> tuple[Any, Any, Any]:
+    """Return padded times, values and mask; `xp` is the array module, numpy or jax.numpy."""
+    times, n = recording.times, recording.times.shape[0]
+    extra = check_count("length", length, least=n) - n
+    step = (times[-1] - times[0]) / (n - 1) if n > 1 else xp.ones_like(times[0])
+    added = times[-1] + step * xp.arange(1, extra + 1, dtype=times.dtype)
+    rows = ((0, extra), (0, 0))
+    return (
+        xp.concatenate([times, added]),
+        xp.pad(recording.values, rows),
+        xp.pad(recording.mask, rows),
+    )
 
 
 def _best_lengths(lengths: np.ndarray, max_shapes: int) -> list[int]:
@@ -151,9 +160,9 @@ def _check_alike(recordings: Sequence[Recording]) -> None:
     first = recordings[0]
     for i, r in enumerate(recordings):
         check_recording(f"recordings[{i}]", r)
-        if not is_concrete(r.times):
+        if not is_concrete(*jax.tree.leaves(r)):
             raise TypeError(
-                f"`recordings[{i}].times` must be known; got a traced array. "
+                f"`recordings[{i}]` must hold known values; got a traced array. "
                 "Fix: call `bucket` outside `jit`."
             )
         if r.channels != first.channels:

@@ -151,7 +151,9 @@ def _usual_step(times: np.ndarray) -> float:
             "Fix: `step=...`, in the unit of `times`."
         )
     intervals = np.diff(times)
-    return float((times[-1] - times[0]) / np.round(intervals / np.median(intervals)).sum())
+    # An interval that occurs: the mean of the two middle ones may fit neither.
+    median = np.quantile(intervals, 0.5, method="lower")
+    return float((times[-1] - times[0]) / np.round(intervals / median).sum())
 
 
 def _grid_rows(times: np.ndarray, step: float, allowed: float) -> np.ndarray:

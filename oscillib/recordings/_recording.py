@@ -77,9 +77,12 @@ def recording(times: Any, values: Any, *, channels: Sequence[str] | None = None)
     check_same_dtype("times", times, "values", values)
     names = _check_names(channels, values.shape[1])
     check_times("times", times)
-    mask = ~jnp.isnan(values)
     _check_observed(values, names)
-    return Recording(jnp.asarray(times), jnp.where(mask, values, 0), mask, names)
+    # Known values are masked on the host, where a new length compiles nothing.
+    xp = np if is_concrete(values) else jnp
+    mask = ~xp.isnan(values)
+    filled = xp.where(mask, values, xp.zeros_like(values))
+    return Recording(jnp.asarray(times), jnp.asarray(filled), jnp.asarray(mask), names)
 
 
 def take(recording: Recording, start: int, stop: int) -> Recording:
@@ -184,7 +187,13 @@ def _numbers(name: str, x: Any) -> jax.Array | np.ndarray:
             f"Fix: `{name}.filled(np.nan)`."
         )
     if not isinstance(x, jax.Array):
-        x = np.asarray(x)
+        try:
+            x = np.asarray(x)
+        except ValueError as error:
+            raise ValueError(
+                f"`{name}` must be one array; its rows differ in length ({error}). "
+                "Fix: give every row an entry for each channel, NaN where missing."
+            ) from error
     if np.issubdtype(x.dtype, np.datetime64) or np.issubdtype(x.dtype, np.timedelta64):
         raise TypeError(
             f"`{name}` must hold real numbers; got dates ({x.dtype}). Fix: count from the first, "
