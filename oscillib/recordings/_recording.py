@@ -1,6 +1,6 @@
 """A recording as arrays: sample times, values with a mask instead of NaN, names of channels."""
 
-from collections.abc import Sequence
+from collections.abc import Iterable, Sequence
 from typing import Any
 
 import equinox as eqx
@@ -240,12 +240,13 @@ def _check_shapes(times: Any, values: Any) -> None:
 def _check_names(channels: Any, count: int) -> tuple[str, ...]:
     if channels is None:
         return tuple(f"channel_{i}" for i in range(count))
-    if isinstance(channels, str) or not all(isinstance(c, str) for c in channels):
+    listed = isinstance(channels, Iterable) and not isinstance(channels, str)
+    if not listed or not all(isinstance(c, str) for c in channels):
         raise TypeError(
             f"`channels` must be a sequence of names; got {channels!r}. "
             "Fix: a tuple of strings, such as `('left', 'right')`."
         )
-    names = tuple(channels)
+    names = tuple(str(c) for c in channels)
     if len(names) != count:
         raise ValueError(
             f"`channels` must have a name for each of the {count} columns of `values`; got "

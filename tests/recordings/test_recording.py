@@ -99,6 +99,7 @@ def test_errors_of_arrays(user_errors, times, values, error, message):
         (("a",), ValueError, r"each of the 2 columns of `values`; got 1"),
         ("ab", TypeError, "`channels` must be a sequence of names; got 'ab'"),
         ((1, 2), TypeError, "sequence of names"),
+        (2, TypeError, "sequence of names; got 2"),
         (("a", "a"), ValueError, "got 'a' at indices 0 and 1"),
         (("a", ""), ValueError, "got '' at index 1"),
         (("a ", "b"), ValueError, "no space at either end"),
