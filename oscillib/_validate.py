@@ -24,7 +24,10 @@ def as_float(x: Any) -> jax.Array:
 
     A weakly typed scalar would make a compiled function trace again for the first strong one.
     """
-    x = x if isinstance(x, jax.Array | np.ndarray) else np.asarray(x)
+    if not isinstance(x, jax.Array | np.ndarray):
+        # A list may hold arrays that are being traced, which numpy cannot take.
+        traced = any(isinstance(leaf, Tracer) for leaf in jax.tree.leaves(x))
+        x = jnp.asarray(x) if traced else np.asarray(x)
     default = jnp.zeros(()).dtype
     dtype = x.dtype if jnp.issubdtype(x.dtype, jnp.floating) else default
     return jnp.asarray(x, dtype=jax.dtypes.canonicalize_dtype(dtype))

@@ -95,7 +95,7 @@ def segmented_scan(
         The last carry, and the `y`s stacked along the first axis.
 
     Raises:
-        ValueError: `xs` holds no array; `segment` is below 1.
+        ValueError: `xs` holds no array, or arrays of several lengths; `segment` is below 1.
         TypeError: `segment` is not an int.
 
     Example:
@@ -110,6 +110,9 @@ def segmented_scan(
     leaves = jax.tree.leaves(xs)
     if not leaves:
         raise ValueError("`xs` must hold at least one array to scan over; got none.")
+    lengths = {leaf.shape[0] for leaf in leaves}
+    if len(lengths) > 1:
+        raise ValueError(f"`xs` must hold arrays of one length; got {sorted(lengths)}.")
     length = leaves[0].shape[0]
     if segment is None or check_count("segment", segment) >= length:
         return lax.scan(body, carry, xs)

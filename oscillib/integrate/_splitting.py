@@ -92,11 +92,16 @@ def _composed(outer: Flow, inner: Flow, stages: tuple[float, ...], substeps: int
     def step(params, h):
         small = h / substeps
         # Half steps of the outer flow that meet are one: b_k / 2 + b_(k+1) / 2, also across steps.
-        first = outer(params, stages[0] / 2 * small)
-        joint = outer(params, (stages[0] + stages[-1]) / 2 * small)
-        last = outer(params, stages[-1] / 2 * small)
-        inners = {b: inner(params, b * small) for b in set(stages)}
-        between = [outer(params, (b + c) / 2 * small) for b, c in itertools.pairwise(stages)]
+        # Each flow is prepared once for each length it is needed at: that may cost a matrix
+        # exponential.
+        meeting = [(b + c) / 2 for b, c in itertools.pairwise(stages)]
+        across = (stages[0] + stages[-1]) / 2
+        ends = [stages[0] / 2, stages[-1] / 2]
+        needed = dict.fromkeys([*ends, *meeting, *([across] if substeps > 1 else [])])
+        outers = {b: outer(params, b * small) for b in needed}
+        inners = {b: inner(params, b * small) for b in dict.fromkeys(stages)}
+        first, last = (outers[b] for b in ends)
+        between = [outers[b] for b in meeting]
 
         def stages_within(y):
             for k, b in enumerate(stages):
@@ -108,7 +113,7 @@ def _composed(outer: Flow, inner: Flow, stages: tuple[float, ...], substeps: int
             del t
             y = stages_within(first(y))
             if substeps > 1:
-                y = lax.fori_loop(1, substeps, lambda _, y: stages_within(joint(y)), y)
+                y = lax.fori_loop(1, substeps, lambda _, y: stages_within(outers[across](y)), y)
             return last(y)
 
         return advance

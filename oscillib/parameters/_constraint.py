@@ -6,6 +6,7 @@ from typing import Any
 
 import jax
 import jax.numpy as jnp
+import numpy as np
 from jaxtyping import Array, Float
 
 
@@ -116,6 +117,9 @@ class Interval(Constraint):
             raise ValueError(
                 f"`upper` must be above `lower`; got lower={self.lower}, upper={self.upper}."
             )
+        # A numpy scalar would carry its own precision into the parameter's.
+        object.__setattr__(self, "lower", float(self.lower))
+        object.__setattr__(self, "upper", float(self.upper))
 
     def to_free(self, value: Array) -> Array:
         """Return the logit of the position within the interval."""
@@ -128,10 +132,10 @@ class Interval(Constraint):
 
 @dataclasses.dataclass(frozen=True)
 class OffDiagonal(Constraint):
-    """A square matrix whose diagonal is zero: only the other entries are fitted.
+    """A square matrix of which only the entries off the diagonal are fitted.
 
     The diagonal of a diffusive coupling matrix has no effect, so fitting it would leave flat
-    directions. The free array has shape `(node * (node - 1),)`.
+    directions; it stays as the template has it. The free array has shape `(node * (node - 1),)`.
 
     Example:
         >>> import jax.numpy as jnp
@@ -145,11 +149,9 @@ class OffDiagonal(Constraint):
         return value[_off_diagonal(value.shape[0])]
 
     def to_value(self, free: Any, template: Array) -> Array:
-        """Return the matrix with `free` off the diagonal and zeros on it."""
-        return jnp.zeros_like(template).at[_off_diagonal(template.shape[0])].set(free)
+        """Return `template` with `free` off the diagonal."""
+        return template.at[_off_diagonal(template.shape[0])].set(free)
 
 
 def _off_diagonal(n: int):
-    rows, columns = jnp.indices((n, n)).reshape(2, -1)
-    keep = jnp.flatnonzero(rows != columns, size=n * (n - 1))
-    return rows[keep], columns[keep]
+    return np.nonzero(~np.eye(n, dtype=bool))

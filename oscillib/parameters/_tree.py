@@ -94,7 +94,8 @@ def all_finite(tree: PyTree) -> Bool[Array, ""]:
         >>> bool(all_finite({"a": jnp.array([1.0, jnp.nan])}))
         False
     """
-    leaves = [leaf for leaf in jax.tree.leaves(tree) if jnp.issubdtype(leaf.dtype, jnp.floating)]
+    leaves = [jnp.asarray(leaf) for leaf in jax.tree.leaves(tree)]
+    leaves = [leaf for leaf in leaves if jnp.issubdtype(leaf.dtype, jnp.floating)]
     return jnp.all(jnp.array([jnp.all(jnp.isfinite(leaf)) for leaf in leaves], dtype=bool))
 
 
