@@ -1,5 +1,6 @@
 """Vector autoregression by ridge regression: the linear forecast that a model should beat."""
 
+from functools import partial
 from typing import Any
 
 import equinox as eqx
@@ -104,12 +105,16 @@ def fit_autoregression(
     ridge = jnp.asarray(ridge, dtype=values.dtype)
     check_shape("ridge", ridge, (), "()")
     check_values("ridge", ridge, lambda r: r >= 0, "0 or more")
-    channels = values.shape[-1]
-    lags, target, used = _rows(
-        values.reshape(-1, *values.shape[-2:]), mask.reshape(-1, *mask.shape[-2:]), order
-    )
-    _check_rows(used, ridge, lags.shape[1])
+    values, mask = (x.reshape(-1, *x.shape[-2:]) for x in (values, mask))
+    _check_rows(mask, ridge, order)
+    return _fit(values, mask, ridge, order)
 
+
+@partial(jax.jit, static_argnames="order")
+def _fit(values: Array, mask: Array, ridge: Array, order: int) -> Autoregression:
+    channels = values.shape[-1]
+    lags, target = _lags(values, order), values[:, order:].reshape(-1, channels)
+    used = _used_rows(mask, order).reshape(-1, 1)
     count = jnp.sum(used).astype(values.dtype)
     lag_mean, lags = _centre(lags, used, count)
     mean, target = _centre(target, used, count)
@@ -169,11 +174,17 @@ def forecast_autoregression(
     """
     values, mask = check_samples(values, mask)
     horizon = check_count("horizon", horizon)
-    order, channels = model.coefficients.shape[:2]
+    channels = model.intercept.shape[0]
     check_shape("values", values, (None, channels), "(time, channel of `model`)")
     check_same_dtype("values", values, "model.coefficients", model.coefficients)
     origins = check_origins(origins, values.shape[0] - 1, "inside the recording")
+    return _forecast(model, values, mask, origins, horizon)
 
+
+@partial(jax.jit, static_argnames="horizon")
+def _forecast(
+    model: Autoregression, values: Array, mask: Array, origins: Array, horizon: int
+) -> Array:
     def know(history, sample):
         value, observed = sample
         history = _push(history, jnp.where(observed, value, _predict(model, history)))
@@ -183,7 +194,7 @@ def forecast_autoregression(
         new = _predict(model, history)
         return _push(history, new), new
 
-    before = jnp.broadcast_to(model.mean[None], (order, channels))
+    before = jnp.broadcast_to(model.mean[None], model.coefficients.shape[:2])
     histories = jax.lax.scan(know, before, (values, mask))[1]
     iterate = lambda history: jax.lax.scan(forecast, history, length=horizon)[1]
     return jax.vmap(iterate)(take_samples(histories, origins))
@@ -223,7 +234,11 @@ def forecast_covariance(
     Source:
         Lütkepohl 2005, New Introduction to Multiple Time Series Analysis, section 2.2.2.
     """
-    horizon = check_count("horizon", horizon)
+    return _response_sum(model, check_count("horizon", horizon))
+
+
+@partial(jax.jit, static_argnames="horizon")
+def _response_sum(model: Autoregression, horizon: int) -> Array:
     unit = jnp.eye(model.intercept.shape[0], dtype=model.coefficients.dtype)
 
     def respond(history, _):
@@ -253,21 +268,25 @@ def _push(history: Array, new: Array) -> Array:
     return jnp.concatenate([new[None], history[:-1]])
 
 
-def _rows(values: Array, mask: Array, order: int) -> tuple[Array, Array, Array]:
-    """Lay out lags `(row, order * channel)`, targets `(row, channel)` and the rows to use."""
+def _lags(values: Array, order: int) -> Array:
+    """Lay out `(recording, time, channel)` as the lags of each row, `(row, order * channel)`."""
     num, channels = values.shape[1:]
-    shifted = lambda x: [x[:, order - k : num - k] for k in range(order + 1)]
-    target, *lags = shifted(values)
-    observed = jnp.all(jnp.stack(shifted(jnp.all(mask, axis=-1))), axis=0)
-    lags = jnp.stack(lags, axis=2).reshape(-1, order * channels)
-    return lags, target.reshape(-1, channels), observed.reshape(-1, 1)
+    lags = [values[:, order - k : num - k] for k in range(1, order + 1)]
+    return jnp.stack(lags, axis=2).reshape(-1, order * channels)
 
 
-def _check_rows(used: Any, ridge: Any, columns: int) -> None:
-    if not is_concrete(used, ridge):
+def _used_rows(mask: Array, order: int) -> Array:
+    """Tell which rows have their target and all lags observed, `(recording, time - order)`."""
+    num, observed = mask.shape[1], mask.all(axis=-1)
+    return jnp.stack([observed[:, order - k : num - k] for k in range(order + 1)]).all(axis=0)
+
+
+def _check_rows(mask: Any, ridge: Any, order: int) -> None:
+    if not is_concrete(mask, ridge):
         return
+    columns = order * mask.shape[-1]
     least = 2 if float(ridge) > 0 else columns + 2
-    count = int(jnp.sum(used))
+    count = int(_used_rows(mask, order).sum())
     if count < least:
         raise ValueError(
             f"`mask` must leave at least {least} rows with every lag observed for {columns} lagged "

@@ -93,7 +93,7 @@ def diebold_mariano(
     check_shape("errors_b", errors_b, jnp.shape(errors_a), "that of `errors_a`")
     check_same_dtype("errors_b", errors_b, "errors_a", errors_a)
     h, n = check_count("horizon", horizon), errors_a.shape[0]
-    if n <= max(h, 1):
+    if n <= h:
         raise ValueError(f"`errors_a` must have more origins than `horizon` = {h}; got {n}.")
     difference = errors_a**2 - errors_b**2
     mean = jnp.mean(difference)

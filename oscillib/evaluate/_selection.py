@@ -100,7 +100,7 @@ def choose_autoregression(
     if not np.isfinite(errors[best, penalty]):
         raise ValueError(
             "`orders` and `ridges` must hold a candidate determined by the samples before the "
-            "part set apart; got none. Fix: smaller orders, a positive ridge, or a smaller `holdout`."
+            "part set apart; got none. Fix: smaller orders, a positive ridge, a smaller `holdout`."
         )
     order, ridge = int(orders[best]), ridges[penalty]
     model = fit_autoregression(values, mask, order=order, ridge=ridge)
