@@ -7,4 +7,5 @@ from ._periodogram import (
     periodogram as periodogram,
 )
 from ._spectrum_start import SpectrumStart as SpectrumStart, spectrum_start as spectrum_start
+from ._status import Status as Status, describe as describe
 from ._window import longest_window as longest_window, window_lengths as window_lengths
