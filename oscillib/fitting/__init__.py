@@ -1,11 +1,31 @@
 """Starting, staging and checking fits of oscillators to recordings."""
 
 from ._collapse import Collapse as Collapse, collapse as collapse
+from ._flat import parameter_names as parameter_names
 from ._periodogram import (
     Periodogram as Periodogram,
     default_frequencies as default_frequencies,
     periodogram as periodogram,
 )
+from ._refine import (
+    Refinement as Refinement,
+    RefineState as RefineState,
+    refine as refine,
+    refine_init as refine_init,
+    refine_step as refine_step,
+)
 from ._spectrum_start import SpectrumStart as SpectrumStart, spectrum_start as spectrum_start
 from ._status import Status as Status, describe as describe
 from ._window import longest_window as longest_window, window_lengths as window_lengths
+from ._shooting import (
+    GaussianPrior as GaussianPrior,
+    Shooting as Shooting,
+    ShootingResult as ShootingResult,
+    shoot as shoot,
+)
+from ._shooting_continuity import (
+    AugmentedContinuity as AugmentedContinuity,
+    HardContinuity as HardContinuity,
+    SoftContinuity as SoftContinuity,
+)
+from ._shooting_solver import Record as Record, ShootingState as ShootingState
