@@ -14,9 +14,6 @@ from ._refine import (
     refine_init as refine_init,
     refine_step as refine_step,
 )
-from ._spectrum_start import SpectrumStart as SpectrumStart, spectrum_start as spectrum_start
-from ._status import Status as Status, describe as describe
-from ._window import longest_window as longest_window, window_lengths as window_lengths
 from ._shooting import (
     GaussianPrior as GaussianPrior,
     Shooting as Shooting,
@@ -29,3 +26,11 @@ from ._shooting_continuity import (
     SoftContinuity as SoftContinuity,
 )
 from ._shooting_solver import Record as Record, ShootingState as ShootingState
+from ._spectrum_start import SpectrumStart as SpectrumStart, spectrum_start as spectrum_start
+from ._status import Status as Status, describe as describe
+from ._weak import (
+    Directions as Directions,
+    describe_directions as describe_directions,
+    weak_directions as weak_directions,
+)
+from ._window import longest_window as longest_window, window_lengths as window_lengths

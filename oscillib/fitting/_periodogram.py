@@ -86,16 +86,7 @@ def periodogram(times: Any, values: Any, mask: Any, frequencies: Any) -> Periodo
     check_shape("frequencies", frequencies, (None,), "(frequency,)")
     check_same_dtype("frequencies", frequencies, "times", times)
     check_values("frequencies", frequencies, lambda w: np.isfinite(w) & (w >= 0), "0 or more")
-    elapsed, centred, mean = centre(times, values, mask)
-
-    # Recomputed in the backward pass: what is kept would be as large as frequencies times times.
-    @jax.checkpoint
-    def at(w):
-        return fit_tone(w, elapsed, centred, mask)
-
-    power, cosine, sine, offset = jax.lax.map(at, frequencies, batch_size=_BATCH)
-    amplitude, phase = polar(cosine, sine)
-    return Periodogram(frequencies, power, amplitude, phase, mean[None] + offset)
+    return Periodogram(frequencies, *_tones(times, values, mask, frequencies))
 
 
 def default_frequencies(times: Any, *, oversample: int = 5) -> Array:
@@ -170,6 +161,21 @@ def centre(times: Array, values: Array, mask: Array) -> tuple[Array, Array, Arra
     count = jnp.maximum(mask.sum(0), 1).astype(values.dtype)
     mean = jnp.where(mask, values, 0).sum(0) / count
     return times - times[0], jnp.where(mask, values - mean[None], 0), mean
+
+
+@jax.jit
+def _tones(times: Array, values: Array, mask: Array, frequencies: Array) -> tuple[Array, ...]:
+    """Power, amplitude, phase and offset at every frequency."""
+    elapsed, centred, mean = centre(times, values, mask)
+
+    # Recomputed in the backward pass: what is kept would be as large as frequencies times times.
+    @jax.checkpoint
+    def at(w):
+        return fit_tone(w, elapsed, centred, mask)
+
+    power, cosine, sine, offset = jax.lax.map(at, frequencies, batch_size=_BATCH)
+    amplitude, phase = polar(cosine, sine)
+    return power, amplitude, phase, mean[None] + offset
 
 
 def fit_tone(

@@ -135,23 +135,27 @@ def spectrum_start(times: Any, values: Any, mask: Any, *, frequencies: Any = Non
             f"{frequencies.shape[0]}."
         )
     check_values("frequencies", frequencies[1:] - frequencies[:-1], lambda d: d > 0, "increasing")
+    return SpectrumStart(*_starts(times, values, mask, frequencies))
+
+
+# Compiled as a whole: step by step, a first call would compile hundreds of operations.
+@jax.jit
+def _starts(times: Array, values: Array, mask: Array, frequencies: Array) -> tuple[Array, ...]:
+    """Fields of a `SpectrumStart` for all channels."""
     power = periodogram(times, values, mask, frequencies).power
     peak = jnp.argmax(power, axis=0)
     elapsed, centred, mean = centre(times, values, mask)
-
-    def of_channel(peak, x, m, mean):
-        low = frequencies[jnp.maximum(peak - 1, 0)]
-        high = frequencies[jnp.minimum(peak + 1, frequencies.shape[0] - 1)]
-        inside = (peak > 0) & (peak < frequencies.shape[0] - 1)
-        return _start(low, high, inside, elapsed, x, m, mean)
-
-    return jax.vmap(of_channel, in_axes=(0, 1, 1, 0))(peak, centred, mask, mean)
+    last = frequencies.shape[0] - 1
+    low, high = frequencies[jnp.maximum(peak - 1, 0)], frequencies[jnp.minimum(peak + 1, last)]
+    inside = (peak > 0) & (peak < last)
+    of_channel = jax.vmap(_start, in_axes=(0, 0, 0, None, 1, 1, 0))
+    return of_channel(low, high, inside, elapsed, centred, mask, mean)
 
 
 def _start(
     low: Array, high: Array, inside: Array, elapsed: Array, x: Array, m: Array, mean: Array
-) -> SpectrumStart:
-    """Start values of one channel: `x` its centred samples, `m` its mask."""
+) -> tuple[Array, ...]:
+    """Fields of a `SpectrumStart` for one channel: `x` its centred samples, `m` its mask."""
     w = _refine(low, high, elapsed, x, m)
     span = elapsed[-1]
     duration = jnp.maximum(2 * jnp.pi / w, _BLOCK_SAMPLES * span / (elapsed.shape[0] - 1))
@@ -167,9 +171,7 @@ def _start(
     share = size / 2 / jnp.where(total > 0, total, 1)
     growth = jnp.where(damped, -half_width, size)
     ok = inside & (pairs >= 4) & jnp.isfinite(w + growth + share + amplitude) & (total > 0)
-    return SpectrumStart(
-        w, amplitude, phase, mean + offset, growth, half_width, variation, share, ok
-    )
+    return w, amplitude, phase, mean + offset, growth, half_width, variation, share, ok
 
 
 def _refine(low: Array, high: Array, elapsed: Array, x: Array, m: Array) -> Array:

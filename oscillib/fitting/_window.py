@@ -47,7 +47,7 @@ def longest_window(frequency_error: Any) -> Array:
 
 
 def window_lengths(
-    num_steps: int, *, first: int, last: int | None = None, factor: float = 2.0
+    num_steps: int, *, first: int, last: int | None = None, factor: float | int = 2
 ) -> tuple[int, ...]:
     """List growing window lengths for a fit in stages. Host-side: lengths set array shapes.
 
