@@ -3,11 +3,15 @@
 from importlib.metadata import version as _version
 
 from . import (
+    evaluate as evaluate,
     fields as fields,
+    fitting as fitting,
     integrate as integrate,
+    likelihood as likelihood,
     losses as losses,
     observe as observe,
     parameters as parameters,
+    recordings as recordings,
 )
 
 
