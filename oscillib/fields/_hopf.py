@@ -227,7 +227,7 @@ def _rotate(y: State, angle: Array) -> State:
 
 # Where the series below take over. Closer to 0 the derivatives of the quotients cancel: the second
 # one loses 2 / u^2 roundings, which at 1e-3 is all of float32's digits.
-_SERIES_BELOW = 0.1
+_SERIES_BELOW = 0.03
 
 
 def _log1p_over(u: Array) -> Array:
@@ -235,9 +235,9 @@ def _log1p_over(u: Array) -> Array:
     small = jnp.abs(u) < _SERIES_BELOW
     safe = jnp.where(small, 1.0, u)
     near = jnp.where(small, u, 0.0)
-    # log(1 + u) = 2 atanh(v), v = u / (2 + u): six terms of this series suffice for float64.
+    # log(1 + u) = 2 atanh(v), v = u / (2 + u): five terms of this series suffice for float64.
     v2 = (near / (2 + near)) ** 2
-    series = 2 / (2 + near) * _polynomial(v2, [1 / (2 * k + 1) for k in range(7)])
+    series = 2 / (2 + near) * _polynomial(v2, [1 / (2 * k + 1) for k in range(5)])
     return jnp.where(small, series, jnp.log1p(safe) / safe)
 
 
@@ -245,7 +245,7 @@ def _expm1_over(u: Array) -> Array:
     """Return `(exp(u) - 1) / u`, by its series near 0 so that every derivative exists there."""
     small = jnp.abs(u) < _SERIES_BELOW
     safe = jnp.where(small, 1.0, u)
-    series = _polynomial(jnp.where(small, u, 0.0), [1 / math.factorial(k + 1) for k in range(11)])
+    series = _polynomial(jnp.where(small, u, 0.0), [1 / math.factorial(k + 1) for k in range(8)])
     return jnp.where(small, series, jnp.expm1(safe) / safe)
 
 
