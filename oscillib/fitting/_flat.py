@@ -46,14 +46,16 @@ def from_flat(params: Any, constraints: Any) -> Callable[[Array], Any]:
 def to_flat(params: Any, constraints: Any) -> Float[Array, " free"]:
     """Return the flat unconstrained vector of parameters."""
     _free_shapes(params, constraints)
-    return ravel_pytree(unconstrain(params, constraints))[0]
+    x = ravel_pytree(unconstrain(params, constraints))[0]
+    # Not weakly typed, whatever the parameters are.
+    return jnp.asarray(x, x.dtype)
 
 
 def check_loss(loss: Callable[[Any], Any], params: Any) -> None:
     """Raise unless `loss(params)` is a floating-point scalar."""
     out = jax.eval_shape(loss, params)
-    shape, dtype = getattr(out, "shape", None), getattr(out, "dtype", None)
-    if shape != () or not jnp.issubdtype(dtype, jnp.floating):
+    scalar = isinstance(out, jax.ShapeDtypeStruct) and out.shape == ()
+    if not scalar or not jnp.issubdtype(out.dtype, jnp.floating):
         raise ValueError(
             f"`loss` must return one floating-point scalar, shape (); got {out}. "
             "Fix: sum over recordings, or `vmap` the fit over them."

@@ -2,6 +2,7 @@
 
 from typing import Any, NamedTuple
 
+import jax
 import jax.numpy as jnp
 import numpy as np
 from jaxtyping import Array, Bool, Float
@@ -18,6 +19,10 @@ from ._flat import (
     slopes,
     to_flat,
 )
+
+
+# Parameters named in a sentence.
+_LISTED = 6
 
 
 class Directions(NamedTuple):
@@ -78,7 +83,7 @@ def weak_directions(
         widths: how far each entry may plausibly be off on the unconstrained scale (a standard
             deviation of its prior), `(free,)`. Default: 1 for `Positive` and `Interval`, which is
             a factor e of the value or of its odds; for others the largest magnitude in the array,
-            or the entry's own S_i if that is larger (an array of zeros has no scale of its own).
+            or `A_ii^(-1/2)` if that is larger (an array of zeros has no scale of its own).
         limit: widths from which on a standard error is no knowledge, default 10.
 
     Returns:
@@ -108,7 +113,7 @@ def weak_directions(
     information = jnp.where(jnp.all(jnp.isfinite(information)), information, 0)
     eps = jnp.finfo(information.dtype).eps
     diagonal = jnp.diagonal(information)
-    widths = _default_widths(leaves, params, diagonal) if widths is None else as_float(widths)
+    widths = default_widths(leaves, params, diagonal) if widths is None else as_float(widths)
     check_shape("widths", widths, (n,), "(free,)")
     scale = 1 / jnp.sqrt(jnp.maximum(diagonal, (limit * widths) ** -2.0))
     values, columns = jnp.linalg.eigh(information * scale[:, None] * scale[None, :])
@@ -129,7 +134,7 @@ def weak_directions(
     )
 
 
-def _default_widths(leaves: list[Leaf], params: Any, diagonal: Array) -> Array:
+def default_widths(leaves: list[Leaf], params: Any, diagonal: Array) -> Array:
     """Return a width for every entry: see `weak_directions`."""
     alone = 1 / jnp.sqrt(jnp.where(diagonal > 0, diagonal, 1))
     values = gather(leaves, params)
@@ -175,40 +180,57 @@ def describe_directions(directions: Directions, params: Any, constraints: Any) -
     """
     names = parameter_names(params, constraints)
     leaves = layout(params, constraints)
-    values = np.asarray(gather(leaves, params))
-    slope = np.asarray(slopes(from_flat(params, constraints), leaves, to_flat(params, constraints)))
+
+    def of_entries(params):
+        x = to_flat(params, constraints)
+        return gather(leaves, params), slopes(from_flat(params, constraints), leaves, x)
+
+    # One small program is built faster than its operations one by one.
+    values, slope = (np.asarray(v) for v in jax.jit(of_entries)(params))
     eps = np.finfo(values.dtype).eps
     floor = 100 * len(names) * eps
     sentences = []
-    for k in np.flatnonzero(np.asarray(directions.weak)):
-        vector = np.asarray(directions.vectors[k])
+    for value, vector in zip(*_tidy(directions, floor), strict=True):
         # Relative changes, or absolute ones of what is zero.
         change = slope * vector / np.where(values == 0, 1, np.abs(values))
-        change = np.where(np.abs(change) > eps**0.25 * np.abs(change).max(), change, 0)
-        lead = np.argmax(np.abs(change))
+        size = np.abs(change)
+        lead, listed = size.argmax(), np.flatnonzero(size > eps**0.25 * size.max())
         unit = 0.01 / change[lead]
-        order = [i for i in np.argsort(-np.abs(change), kind="stable") if change[i] != 0]
-        moves = [_move(names[i], change[i] * unit, values[i] == 0) for i in order[:6]]
-        value = float(directions.information[k])
+        order = listed[np.argsort(-size[listed], kind="stable")]
+        moves = [_move(names[i], change[i] * unit, bool(values[i] == 0)) for i in order[:_LISTED]]
         cost = max(abs(value), floor) * unit**2 / 2
-        sentences.append(
-            _sentence([names[i] for i in order], moves, cost, bool(directions.negative[k]))
-        )
+        sentences.append(_sentence([names[i] for i in order], moves, cost, value < -floor))
     return tuple(sentences)
 
 
-def _move(name: str, change: float, absolute: bool) -> str:
+def _tidy(directions: Directions, floor: float) -> tuple[np.ndarray, np.ndarray]:
+    """Return eigenvalues and vectors of the weak directions, each moving as few as may be.
+
+    Directions without any information are only known up to mixtures of each other: elimination
+    with pivots takes apart what has nothing to do with each other.
+    """
+    weak = np.asarray(directions.weak)
+    values, rows = np.asarray(directions.information)[weak], np.array(directions.vectors)[weak]
+    empty = np.flatnonzero(np.abs(values) <= floor)
+    for k in empty:
+        pivot = np.abs(rows[k]).argmax()
+        for other in empty[empty != k]:
+            rows[other] -= rows[k] * rows[other, pivot] / rows[k, pivot]
+    return values, rows
+
+
+def _move(name: str, change: Any, absolute: bool) -> str:
     verb = "raising" if change > 0 else "lowering"
     amount = f"{abs(change):.2g}" if absolute else f"{100 * abs(change):.2g} percent"
     return f"{verb} `{name}` by {amount}"
 
 
-def _sentence(names: list[str], moves: list[str], cost: float, negative: bool) -> str:
-    quoted = [f"`{name}`" for name in names[:6]]
-    if len(names) > 6:
-        quoted.append(f"{len(names) - 6} more")
+def _sentence(names: list[str], moves: list[str], cost: Any, negative: Any) -> str:
+    quoted = [f"`{name}`" for name in names[:_LISTED]]
+    if len(names) > _LISTED:
+        quoted.append(f"{len(names) - _LISTED} more")
     listed = _join(quoted)
-    together = _join(moves) + (" (and so on)" if len(names) > 6 else "")
+    together = _join(moves) + (" (and so on)" if len(names) > _LISTED else "")
     if negative:
         return (
             f"{listed}: not at a minimum: {together} raises the log-likelihood by about "

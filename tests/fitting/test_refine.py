@@ -12,7 +12,7 @@ def nile():
     """Annual flow of the Nile at Aswan, 1871-1970, 100 values."""
     from statsmodels.datasets import nile
 
-    return jnp.asarray(np.asarray(nile.load_pandas().data["volume"], dtype=float))
+    return jnp.asarray(np.asarray(nile.load().data["volume"], dtype=float))
 
 
 def local_level(params, y):

@@ -1,0 +1,101 @@
+import jax
+import jax.numpy as jnp
+import numpy as np
+import pytest
+
+from oscillib.fitting import (
+    fisher_gaussian,
+    fisher_simulated,
+    observed_information,
+    outer_product_information,
+)
+from oscillib.parameters import Positive
+
+
+CONSTRAINTS = {"decay": Positive(), "size": Positive(), "spread": Positive()}
+TIMES = jnp.linspace(0.0, 2.0, 12)
+
+
+def start(dtype=jnp.float64):
+    return {k: jnp.asarray(v, dtype) for k, v in zip(CONSTRAINTS, (0.8, 3.0, 0.4), strict=True)}
+
+
+def mean(params):
+    return params["size"] * jnp.exp(-params["decay"] * TIMES)
+
+
+def loss(params, y):
+    z = (y - mean(params)) / params["spread"]
+    return jnp.sum(z**2) / 2 + y.size * jnp.log(params["spread"])
+
+
+def simulate(key, params):
+    return mean(params) + params["spread"] * jax.random.normal(key, TIMES.shape)
+
+
+@pytest.fixture(scope="module")
+def expected():
+    """Expected information in closed form, on the log scale."""
+    t, (decay, size, spread) = np.asarray(TIMES), (0.8, 3.0, 0.4)
+    value = size * np.exp(-decay * t)
+    jacobian = np.stack([-decay * t * value, value, 0 * t], axis=1)
+    matrix = jacobian.T @ jacobian / spread**2
+    matrix[2, 2] = 2 * len(t)
+    return matrix
+
+
+@pytest.mark.parametrize("shape", ["()", "(observation,)", "(observation, observation)"])
+def test_gaussian(expected, shape):
+    full = {
+        "()": lambda v: v,
+        "(observation,)": lambda v: v * jnp.ones(12),
+        "(observation, observation)": lambda v: v * jnp.eye(12),
+    }[shape]
+    covariance = lambda p: full(p["spread"] ** 2)
+    out = jax.jit(lambda p: fisher_gaussian(mean, p, CONSTRAINTS, covariance))(start())
+    np.testing.assert_allclose(out, expected, rtol=1e-10, atol=1e-10)
+    # A known covariance says nothing about the spread.
+    known = jax.jit(lambda p: fisher_gaussian(mean, p, CONSTRAINTS, full(jnp.asarray(0.16))))
+    expected = expected * np.array([[1, 1, 0], [1, 1, 0], [0, 0, 0]])
+    np.testing.assert_allclose(known(start()), expected, rtol=1e-10, atol=1e-10)
+
+
+def test_correlated_errors():
+    root = np.tril(0.3 * np.random.default_rng(0).normal(size=(12, 12))) + np.eye(12)
+    v = root @ root.T
+    out = jax.jit(
+        lambda p: fisher_gaussian(mean, p, CONSTRAINTS, lambda p: p["spread"] * jnp.asarray(v))
+    )(start())
+    t = np.asarray(TIMES)
+    value = 3.0 * np.exp(-0.8 * t)
+    jacobian = np.stack([-0.8 * t * value, value, 0 * t], axis=1)
+    expected = jacobian.T @ np.linalg.solve(0.4 * v, jacobian)
+    expected[2, 2] = 12 / 2
+    np.testing.assert_allclose(out, expected, rtol=1e-9, atol=1e-9)
+
+
+def test_simulated_and_outer_product(expected):
+    estimate = jax.jit(
+        lambda key: fisher_simulated(loss, simulate, start(), CONSTRAINTS, key=key, draws=4000)
+    )(jax.random.key(0))
+    scale = np.sqrt(np.diag(expected))
+    error = np.abs(np.asarray(estimate) - expected) / np.outer(scale, scale)
+    # Relative error sqrt(2 / 4000) = 0.022; four of them.
+    assert error.max() < 0.09
+    ys = jax.vmap(lambda k: simulate(k, start()))(jax.random.split(jax.random.key(0), 4000))
+    summed = jax.jit(lambda ys: outer_product_information(loss, start(), CONSTRAINTS, ys))(ys)
+    np.testing.assert_allclose(summed / 4000, estimate, rtol=1e-9)
+
+
+def test_observed_is_expected_where_residuals_vanish(expected):
+    y = mean(start())
+    out = jax.jit(lambda p: observed_information(lambda q: loss(q, y), p, CONSTRAINTS))(start())
+    np.testing.assert_allclose(out[:2, :2], expected[:2, :2], rtol=1e-10)
+    single = start(jnp.float32)
+    low = lambda p: loss({k: v.astype(jnp.float64) for k, v in p.items()}, y).astype(jnp.float32)
+    assert observed_information(low, single, CONSTRAINTS).dtype == jnp.float32
+
+
+def test_errors_name_what_is_wrong(user_errors):
+    with pytest.raises(ValueError, match=r"`covariance` must have shape \(\), \(12,\)"):
+        fisher_gaussian(mean, start(), CONSTRAINTS, jnp.ones(3))
