@@ -1,12 +1,21 @@
 """Starting, staging and checking fits of oscillators to recordings."""
 
 from ._collapse import Collapse as Collapse, collapse as collapse
+from ._density import Density as Density, log_density as log_density
 from ._flat import parameter_names as parameter_names
+from ._information import (
+    fisher_gaussian as fisher_gaussian,
+    fisher_simulated as fisher_simulated,
+    observed_information as observed_information,
+    outer_product_information as outer_product_information,
+)
+from ._laplace import Laplace as Laplace, laplace as laplace
 from ._periodogram import (
     Periodogram as Periodogram,
     default_frequencies as default_frequencies,
     periodogram as periodogram,
 )
+from ._profile import Profile as Profile, profile as profile
 from ._refine import (
     Refinement as Refinement,
     RefineState as RefineState,

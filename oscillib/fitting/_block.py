@@ -131,7 +131,7 @@ class Border(NamedTuple):
 def reduce_border(
     border: Float[Array, "recording row column"],
     own: Float[Array, "recording extra po_column"],
-    shared: Float[Array, "extra ps_column"],
+    shared: Float[Array, "more ps_column"],
 ) -> Border:
     """Reduce the rows of all recordings to triangular form.
 

@@ -19,10 +19,11 @@ from .._validate import (
 from ..integrate import Windows, join
 from ..parameters import Free
 from ._collapse import collapse
-from ._shooting_continuity import Continuity, HardContinuity
+from ._shooting_continuity import HardContinuity
 from ._shooting_residual import Moved, Residual, lay_out
 from ._shooting_solver import Record, ShootingState, Solver
 from ._shooting_unknowns import Unknowns
+from ._shooting_verdict import Continuity
 from ._status import Status
 
 
@@ -76,7 +77,8 @@ class Shooting(eqx.Module):
     """A windowed fit as pure functions: `init`, `step` (or `run`) and `result`.
 
     The problem, the arguments and their meaning are those of `shoot`, which runs the three in a
-    `while_loop`. All work under `jit` and `vmap`; a fit that has ended passes `step` unchanged.
+    `while_loop`. All are compiled, and work under `jit` and `vmap`; a fit that has ended passes
+    `step` unchanged.
 
     Example:
         >>> import jax.numpy as jnp
@@ -165,6 +167,7 @@ class Shooting(eqx.Module):
             max_steps=check_count("max_steps", max_steps),
         )
 
+    @eqx.filter_jit
     def init(self, params: PyTree = None, starts: Any = None) -> ShootingState:
         """Return the state at the start, or at other parameters and starts of the same shapes."""
         at = self.at
@@ -175,10 +178,12 @@ class Shooting(eqx.Module):
             at = at._replace(starts=jnp.reshape(starts, at.starts.shape))
         return self.solver.init(at)
 
+    @eqx.filter_jit
     def step(self, state: ShootingState) -> ShootingState:
         """Take one step of the damped Gauss-Newton method; an ended fit is left as it is."""
         return self.solver.step(state)
 
+    @eqx.filter_jit
     def run(self, state: ShootingState, limit: int | None = None) -> ShootingState:
         """Step until the fit ends or has taken `limit` steps (default: `max_steps`)."""
         most = self.solver.max_steps
@@ -190,6 +195,7 @@ class Shooting(eqx.Module):
         gaps = solver.whiten(linear.rows.gaps)
         return linear.misfit + solver.continuity.yardstick(gaps, solver.information(linear))
 
+    @eqx.filter_jit
     def result(self, state: ShootingState) -> ShootingResult:
         """Give the verdict on a fit, with parameters, starts, gaps and covariance."""
         solver, linear, at = self.solver, state.linear, state.at
@@ -302,22 +308,35 @@ def shoot(
         >>> def spring(t, y, params):
         ...     return jnp.stack([y[1], -params["stiffness"] * y[0]])
         >>> times = jnp.linspace(0.0, 10.0, 101)
+        >>> values = jnp.cos(2 * times)[:, None]
+        >>> starts = jnp.stack([values[:-1:10, 0], jnp.zeros(10)], axis=1)  # velocities unknown
         >>> fit = shoot(
         ...     rk4(spring), lambda y, params: y[:1], {"stiffness": jnp.asarray(2.0)},
-        ...     jnp.zeros((10, 2)), cut(times, 10), jnp.cos(2 * times)[:, None],
-        ...     scale=jnp.ones(1),
+        ...     starts, cut(times, 10), values, scale=jnp.ones(1),
         ... )
         >>> print(fit.params["stiffness"].round(3), bool(jnp.abs(fit.gaps).max() < 1e-10))
         4.0 True
 
     Source: Bock 1983; van Domselaar & Hemker 1975; damping after Nielsen 1999 (from memory).
     """
-    settings = dict(
-        scale=scale, mask=mask, constraints=constraints, own=own, continuity=continuity,
-        prior=prior, start_prior=start_prior, tolerance=tolerance, damping=damping,
+    fit = Shooting(
+        step,
+        readout,
+        params,
+        starts,
+        windows,
+        values,
+        scale=scale,
+        mask=mask,
+        constraints=constraints,
+        own=own,
+        continuity=continuity,
+        prior=prior,
+        start_prior=start_prior,
+        tolerance=tolerance,
+        damping=damping,
         max_steps=max_steps,
-    )  # fmt: skip
-    fit = Shooting(step, readout, params, starts, windows, values, **settings)
+    )
     return _shoot(fit)
 
 

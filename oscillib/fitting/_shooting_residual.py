@@ -99,7 +99,7 @@ class Residual(eqx.Module):
 
         misfit = jnp.sum(residuals**2) / 2
         linear = Linear(rows, misfit, split(slope), split(square), predicted)
-        return linear if self.prior is None else self._with_prior(linear, at)
+        return linear if self.prior is None else _with_prior(linear, at, self.prior)
 
     def prior_rows(self, at: Moved) -> tuple[Array, Array]:
         """Return the prior's rows, `(recording, po, po + 1)` and `(ps, ps + 1)`."""
@@ -115,20 +115,6 @@ class Residual(eqx.Module):
         return (
             jax.vmap(rows)(at.own, mean.own, weight.own),
             rows(at.shared, mean.shared, weight.shared),
-        )
-
-    def _with_prior(self, linear: Linear, at: Moved) -> Linear:
-        mean, weight = self.prior
-        own, shared = weight.own * (at.own - mean.own), weight.shared * (at.shared - mean.shared)
-        gradient, columns = linear.gradient, linear.columns
-        return linear._replace(
-            misfit=linear.misfit + (jnp.sum(own**2) + jnp.sum(shared**2)) / 2,
-            gradient=gradient._replace(
-                own=gradient.own + weight.own * own, shared=gradient.shared + weight.shared * shared
-            ),
-            columns=columns._replace(
-                own=columns.own + weight.own**2, shared=columns.shared + weight.shared**2
-            ),
         )
 
     def _recording(self, own, shared, starts, own_template, data: Data):
@@ -199,4 +185,19 @@ def lay_out(
         intervals=each(windows.intervals),
         start_mean=mean,
         start_weight=weight,
+    )
+
+
+def _with_prior(linear: Linear, at: Moved, prior: tuple[Moved, Moved]) -> Linear:
+    mean, weight = prior
+    own, shared = weight.own * (at.own - mean.own), weight.shared * (at.shared - mean.shared)
+    gradient, columns = linear.gradient, linear.columns
+    return linear._replace(
+        misfit=linear.misfit + (jnp.sum(own**2) + jnp.sum(shared**2)) / 2,
+        gradient=gradient._replace(
+            own=gradient.own + weight.own * own, shared=gradient.shared + weight.shared * shared
+        ),
+        columns=columns._replace(
+            own=columns.own + weight.own**2, shared=columns.shared + weight.shared**2
+        ),
     )

@@ -17,8 +17,8 @@ from ._block import (
     solve_border,
     substitute,
 )
-from ._shooting_continuity import Continuity, Move, Pull
 from ._shooting_residual import Linear, Moved, Residual
+from ._shooting_verdict import Continuity, Move, Pull
 from ._status import Status
 
 
@@ -113,7 +113,7 @@ class Solver(eqx.Module):
     def information(self, linear: Linear) -> Array:
         """Return the greatest curvature of the misfit along a start, per whitened unit."""
         columns = linear.columns.starts[:, 1:]
-        factor = self.continuity.factor(*columns.shape[1:], columns.dtype)
+        factor = self.continuity.factor(columns.shape[1], columns.shape[2], columns.dtype)
         return jnp.max(columns / jnp.sum(factor**2, axis=1)[None], initial=0)
 
     def change(
