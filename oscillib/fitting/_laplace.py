@@ -94,13 +94,14 @@ def laplace(
         TypeError: what is fitted is not of one floating dtype.
 
     Example:
+        >>> import jax
         >>> import jax.numpy as jnp
         >>> from oscillib.fitting import laplace
         >>> from oscillib.parameters import Positive
         >>> samples = jnp.array([1.0, -2.0, 2.0, 3.0])
         >>> loss = lambda p: 4 * jnp.log(p["scale"]) + jnp.sum((samples / p["scale"]) ** 2) / 2
         >>> best = {"scale": jnp.sqrt(4.5)}
-        >>> out = laplace(loss, best, {"scale": Positive()}, level=0.9)
+        >>> out = jax.jit(lambda p: laplace(loss, p, {"scale": Positive()}))(best)
         >>> print(out.standard_error["scale"].round(4), out.lower["scale"].round(4))
         0.75 1.1859
 
