@@ -179,15 +179,17 @@ def fisher_gaussian(
     x = to_flat(params, constraints)
     jacobian = jax.jacfwd(lambda x: mean(to_params(x)).reshape(-1))(x)
     n = jacobian.shape[0]
-    known = not callable(covariance)
-    of_x = (lambda x: covariance) if known else (lambda x: covariance(to_params(x)))
-    v = jnp.asarray(of_x(x))
+
+    def of_x(x):
+        return jnp.asarray(covariance(to_params(x)) if callable(covariance) else covariance)
+
+    v = of_x(x)
     if v.shape not in ((), (n,), (n, n)):
         raise ValueError(
             f"`covariance` must have shape (), ({n},) or ({n}, {n}) for the {n} observations of "
             f"`mean`; got {v.shape}."
         )
-    slope = None if known else jax.jacfwd(lambda x: jnp.asarray(of_x(x)))(x)
+    slope = jax.jacfwd(of_x)(x) if callable(covariance) else None
     if v.ndim < 2:
         variance = jnp.broadcast_to(v, (n,))[:, None]
         information = (jacobian / variance).T @ jacobian

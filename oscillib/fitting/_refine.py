@@ -165,13 +165,15 @@ def refine_init(loss: Callable[[Any], Array], params: Any, constraints: Any) -> 
         TypeError: as `refine`.
 
     Example:
+        >>> import jax
         >>> import jax.numpy as jnp
         >>> from oscillib.fitting import refine_init, refine_step
         >>> from oscillib.parameters import Free
         >>> loss = lambda x: jnp.sum((x - 3.0) ** 2)
         >>> state = refine_init(loss, jnp.zeros(1), Free())
+        >>> step = jax.jit(lambda state: refine_step(loss, state, Free()))
         >>> for _ in range(2):
-        ...     state = refine_step(loss, state, Free())
+        ...     state = step(state)
         >>> state.params
         Array([3.], dtype=float64)
     """

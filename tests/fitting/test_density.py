@@ -61,7 +61,7 @@ CONSTRAINTS = {
 
 
 def loss(params):
-    return sum(jnp.sum(jnp.cos(v)) for v in params.values())
+    return jnp.sum(jnp.stack([jnp.sum(jnp.cos(v)) for v in params.values()]))
 
 
 def test_jacobian_against_a_numerical_one():

@@ -93,7 +93,8 @@ def test_observed_is_expected_where_residuals_vanish(expected):
     np.testing.assert_allclose(out[:2, :2], expected[:2, :2], rtol=1e-10)
     single = start(jnp.float32)
     low = lambda p: loss({k: v.astype(jnp.float64) for k, v in p.items()}, y).astype(jnp.float32)
-    assert observed_information(low, single, CONSTRAINTS).dtype == jnp.float32
+    out = jax.eval_shape(lambda p: observed_information(low, p, CONSTRAINTS), single)
+    assert out.dtype == jnp.float32
 
 
 def test_errors_name_what_is_wrong(user_errors):

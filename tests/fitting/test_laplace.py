@@ -30,7 +30,7 @@ def test_logistic_regression_as_statsmodels():
     import statsmodels.api as sm
 
     rng = np.random.default_rng(2)
-    x = sm.add_constant(rng.normal(size=(200, 2)))
+    x = np.column_stack([np.ones(200), rng.normal(size=(200, 2))])
     y = (rng.random(200) < 1 / (1 + np.exp(-(x @ [0.3, 1.0, -0.7])))).astype(float)
     expected = sm.Logit(y, x).fit(disp=False, tol=1e-12)
     design, seen = jnp.asarray(x), jnp.asarray(y)
@@ -135,8 +135,8 @@ def test_unidentifiable_pair_is_refused_and_the_rest_is_not():
     np.testing.assert_allclose(
         out.standard_error["centre"], np.std(ys, axis=1) / np.sqrt(60), rtol=1e-6
     )
-    one = jax.tree.map(lambda v: v[0], (out.directions, found.params))
-    (words,) = describe_directions(*one, constraints)
+    directions, params = jax.tree.map(lambda v: v[0], (out.directions, found.params))
+    (words,) = describe_directions(directions, params, constraints)
     assert "`gain` and `noise` trade off" in words
     # A recording that is lost refuses everything of its own, and nothing of the others.
     _, lost = batch(start, ys.at[1, 0].set(jnp.nan))
@@ -147,7 +147,8 @@ def test_unidentifiable_pair_is_refused_and_the_rest_is_not():
 def test_supplied_matrix_and_distance():
     loss = lambda b: 2 * (b[0] - 1) ** 2 + 8 * b[1] ** 2
     b = jnp.array([1.5, 0.0])
-    out = laplace(loss, b, Free(), curvature=jnp.diag(jnp.array([4.0, 16.0])))
+    matrix = jnp.diag(jnp.array([4.0, 16.0]))
+    out = jax.jit(lambda b: laplace(loss, b, Free(), curvature=matrix))(b)
     # Half a unit off, at a standard error of a half.
     np.testing.assert_allclose(out.distance, 1.0, rtol=1e-12)
     np.testing.assert_allclose(out.standard_error, [0.5, 0.25], rtol=1e-12)
@@ -158,7 +159,10 @@ def test_supplied_matrix_and_distance():
     [
         (lambda: laplace(jnp.sum, jnp.ones(2), Free(), level=1.0), "`level` must lie strictly"),
         (lambda: laplace(jnp.sum, jnp.ones(2), Free(), curvature=jnp.eye(3)), "`curvature` must"),
-        (lambda: laplace(jnp.sum, jnp.ones(2), Free(), curvature="fisher"), "'hessian' or a"),
+        (
+            lambda: laplace(jnp.sum, jnp.ones(2), Free(), curvature="fisher"),  # pyright: ignore
+            "'hessian' or a",
+        ),
         (lambda: laplace(lambda p: p, jnp.ones(2), Free()), "`loss` must return one"),
     ],
 )

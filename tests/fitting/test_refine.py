@@ -1,3 +1,5 @@
+from typing import Any
+
 import jax
 import jax.numpy as jnp
 import numpy as np
@@ -12,7 +14,8 @@ def nile():
     """Annual flow of the Nile at Aswan, 1871-1970, 100 values."""
     from statsmodels.datasets import nile
 
-    return jnp.asarray(np.asarray(nile.load().data["volume"], dtype=float))
+    table: Any = nile.load_pandas().data
+    return jnp.asarray(table["volume"].to_numpy(float))
 
 
 def local_level(params, y):
