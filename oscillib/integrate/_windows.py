@@ -112,20 +112,20 @@ def cut(times: Float[Array, " time"], length: int, *, tolerance: float = 1e-6) -
             "Fix: shorten the window."
         )
     check_values("times", times, np.isfinite, "finite")
-    intervals = jnp.diff(times)
+    # Known times are cut on the host, where no new length of a recording compiles anew.
+    at = np.asarray(times) if is_concrete(times) else times
+    intervals = at[1:] - at[:-1]
     check_values(
         "times", intervals, lambda d: d > 0, "strictly increasing (its differences above 0)"
     )
     starts = np.arange(0, num - 1, length)
-    windows = Windows(num, int(length), times[starts], intervals[0])
-    if not _regular(times, tolerance):
-        place = np.minimum(starts[:, None] + np.arange(length), num - 2)
-        windows = Windows(num, int(length), times[starts], intervals[place])
-    elif is_concrete(times):
+    if _regular(times, tolerance):
         # The mean interval, not the first: rounding of late times would else add up.
-        mean = (np.float64(times[-1]) - np.float64(times[0])) / (num - 1)
-        windows = Windows(num, int(length), times[starts], jnp.asarray(mean, times.dtype))
-    return windows
+        each = (np.float64(at[-1]) - np.float64(at[0])) / (num - 1)
+    else:
+        each = intervals[np.minimum(starts[:, None] + np.arange(length), num - 2)]
+    t0, each = (jnp.asarray(x, times.dtype) for x in (at[starts], each))
+    return Windows(num, int(length), t0, each)
 
 
 def roll_windows(

@@ -1,5 +1,7 @@
 """Continuity: what gaps between windows cost."""
 
+import math
+
 import jax.numpy as jnp
 from jaxtyping import Array, Float
 
@@ -64,8 +66,8 @@ def continuity(
     if name == "scale":
         _require(name, value, gaps.shape[1:], "the shape of one state")
         return jnp.sum((gaps / value[None]) ** 2) / 2
-    flat = gaps.reshape(gaps.shape[0], -1)
-    size = flat.shape[1]
+    size = math.prod(gaps.shape[1:])
+    flat = gaps.reshape(gaps.shape[0], size)
     if value.shape != (gaps.shape[0], size, size):
         _require(name, value, (size, size), "(size, size) or (joint, size, size)")
         value = jnp.broadcast_to(value, (gaps.shape[0], size, size))
