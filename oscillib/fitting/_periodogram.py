@@ -173,7 +173,11 @@ def _tones(times: Array, values: Array, mask: Array, frequencies: Array) -> tupl
     def at(w):
         return fit_tone(w, elapsed, centred, mask)
 
-    power, cosine, sine, offset = jax.lax.map(at, frequencies, batch_size=_BATCH)
+    # Whole batches: a shorter last one would compile all of it a second time.
+    count = frequencies.shape[0]
+    whole = jnp.pad(frequencies, (0, -count % _BATCH))
+    fitted = jax.lax.map(at, whole, batch_size=_BATCH)
+    power, cosine, sine, offset = (x[:count] for x in fitted)
     amplitude, phase = polar(cosine, sine)
     return power, amplitude, phase, mean[None] + offset
 
