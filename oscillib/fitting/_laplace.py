@@ -121,8 +121,10 @@ def laplace(
     else:
         information = jnp.asarray(curvature)
         check_shape("curvature", information, (x.shape[0],) * 2, "(free, free)")
-    found = weak_directions(information, params, constraints, widths=widths)
     gradient = jax.grad(lambda x: loss(to_params(x)))(x)
+    # A lost recording has no gradient either; its curvature refuses everything by itself.
+    sure = jnp.where(jnp.isfinite(gradient), gradient, 0)
+    found = weak_directions(information, params, constraints, gradient=sure, widths=widths)
     error = jnp.sqrt(jnp.diagonal(found.covariance))
     lower, upper = _intervals(leaves, to_params, x, error, found.refused, params, level)
     slope = slopes(to_params, leaves, x)

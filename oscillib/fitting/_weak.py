@@ -33,7 +33,8 @@ class Directions(NamedTuple):
         vectors: the directions in rows, `(direction, free)`: one unit of a direction moves the
             flat unconstrained vector by its row, and costs half its eigenvalue of log-likelihood.
         weak: directions that are too poorly known, `(direction,)`.
-        negative: those among them along which the loss curves down: not a minimum, `(direction,)`.
+        unresolved: those among them whose eigenvalue is no more than error, `(direction,)`.
+        negative: those along which the loss curves down: not a minimum, `(direction,)`.
         refused: entries that a weak direction moves, `(free,)`: no interval can be given.
         covariance: inverse of the information without the directions that it cannot resolve,
             `(free, free)`; right wherever neither entry is refused.
@@ -42,6 +43,7 @@ class Directions(NamedTuple):
     information: Float[Array, " direction"]
     vectors: Float[Array, "direction free"]
     weak: Bool[Array, " direction"]
+    unresolved: Bool[Array, " direction"]
     negative: Bool[Array, " direction"]
     refused: Bool[Array, " free"]
     covariance: Float[Array, "free free"]
@@ -52,6 +54,7 @@ def weak_directions(
     params: Any,
     constraints: Any,
     *,
+    gradient: Any = None,
     widths: Any = None,
     limit: float = 10.0,
 ) -> Directions:
@@ -64,22 +67,22 @@ def weak_directions(
     so that eigenvalues are the same in any unit: S_i is entry i's standard error, all others known,
     and `1 / sqrt(v_k)` is by how much the uncertainty about the others widens it. A direction is
 
-    * unresolved if `v_k <= 100 free eps`: rounding noise; negative if below minus that;
+    * unresolved if `|v_k| <= 100 free eps + max_j (|d_j| / W_j) sum_i |g_i d_i|`, with d = S vec_k
+      and g the gradient: rounding noise, and what the choice of coordinates adds to a Hessian
+      where the gradient has not quite vanished; negative if below minus that;
     * weak if it is either, or if one standard error along it moves some entry by more than
       `limit` of its widths, `|S_i vec_ik| / sqrt(v_k) > limit W_i`.
 
     An entry is refused if one standard error along a resolved direction moves it that far, or if
-    an unresolved direction moves it at all: `|vec_ik| > eps^(1/4)` (1e-4 in float64, 0.02 in
-    float32). Everything else keeps its covariance: what is unresolved has no part in it.
-
-    The information is local: near, but not at, a minimum its weak directions have small
-    eigenvalues of either sign and their vectors are off by as much, so refine first.
+    an unresolved or negative direction moves it at all: `|vec_ik| > eps^(1/4)` (1e-4 in float64,
+    0.02 in float32). Everything else keeps its covariance: what is unresolved has no part in it.
 
     Arguments:
         information: `(free, free)`, on the unconstrained scale in the order of `parameter_names`:
             Hessian, `fisher_gaussian`, `outer_product_information`, ... Not finite: all refused.
         params: PyTree of parameters at which it was taken.
         constraints: tree of constraints, each acting entry by entry.
+        gradient: of the loss at `params` on the unconstrained scale, `(free,)`; default zero.
         widths: how far each entry may plausibly be off on the unconstrained scale (a standard
             deviation of its prior), `(free,)`. Default: 1 for `Positive` and `Interval`, which is
             a factor e of the value or of its odds; for others the largest magnitude in the array,
@@ -115,11 +118,16 @@ def weak_directions(
     diagonal = jnp.diagonal(information)
     widths = default_widths(leaves, params, diagonal) if widths is None else as_float(widths)
     check_shape("widths", widths, (n,), "(free,)")
+    gradient = jnp.zeros_like(diagonal) if gradient is None else as_float(gradient)
+    check_shape("gradient", gradient, (n,), "(free,)")
     scale = 1 / jnp.sqrt(jnp.maximum(diagonal, (limit * widths) ** -2.0))
     values, columns = jnp.linalg.eigh(information * scale[:, None] * scale[None, :])
     columns = columns.T
-    resolved = values > 100 * n * eps
     vectors = columns * scale[None, :]
+    # A path that bends within a width picks up this much curvature from the gradient.
+    bend = jnp.max(jnp.abs(vectors) / widths[None, :], axis=1)
+    doubt = 100 * n * eps + bend * (jnp.abs(vectors) @ jnp.abs(gradient))
+    resolved, negative = values > doubt, values < -doubt
     error = 1 / jnp.sqrt(jnp.where(resolved, values, 1))
     far = jnp.abs(vectors) * error[:, None] > limit * widths[None, :]
     spoils = jnp.where(resolved[:, None], far, jnp.abs(columns) > eps**0.25)
@@ -128,7 +136,8 @@ def weak_directions(
         information=values,
         vectors=vectors,
         weak=~resolved | jnp.any(far, axis=1),
-        negative=values < -100 * n * eps,
+        unresolved=~(resolved | negative),
+        negative=negative,
         refused=jnp.any(spoils, axis=0),
         covariance=known.T @ known,
     )
@@ -158,7 +167,7 @@ def describe_directions(directions: Directions, params: Any, constraints: Any) -
         constraints: the constraints given there.
 
     Returns:
-        A sentence or two for each weak direction: which parameters trade off, and how little the
+        A sentence for each weak direction: which parameters trade off, and how little the
         log-likelihood changes (by its curvature) if they are moved together so that the one that
         moves most moves by 1 percent. At most six parameters are listed.
 
@@ -174,7 +183,7 @@ def describe_directions(directions: Directions, params: Any, constraints: Any) -
         >>> found = weak_directions(jnp.full((2, 2), 50.0), params, constraints)
         >>> print(*describe_directions(found, params, constraints))
         `gain` and `noise[0]` trade off: raising `gain` by 1 percent and lowering `noise[0]` by \
-1 percent changes the log-likelihood by less than 2.2e-16.
+1 percent changes the log-likelihood by less than 2.3e-16.
 
     Source: common practice, no source.
     """
@@ -188,9 +197,8 @@ def describe_directions(directions: Directions, params: Any, constraints: Any) -
     # One small program is built faster than its operations one by one.
     values, slope = (np.asarray(v) for v in jax.jit(of_entries)(params))
     eps = np.finfo(values.dtype).eps
-    floor = 100 * len(names) * eps
     sentences = []
-    for value, vector in zip(*_tidy(directions, floor), strict=True):
+    for value, vector, negative in zip(*_tidy(directions), strict=True):
         # Relative changes, or absolute ones of what is zero.
         change = slope * vector / np.where(values == 0, 1, np.abs(values))
         size = np.abs(change)
@@ -198,25 +206,25 @@ def describe_directions(directions: Directions, params: Any, constraints: Any) -
         unit = 0.01 / change[lead]
         order = listed[np.argsort(-size[listed], kind="stable")]
         moves = [_move(names[i], change[i] * unit, bool(values[i] == 0)) for i in order[:_LISTED]]
-        cost = max(abs(value), floor) * unit**2 / 2
-        sentences.append(_sentence([names[i] for i in order], moves, cost, value < -floor))
+        cost = max(abs(value), 100 * len(names) * eps) * unit**2 / 2
+        sentences.append(_sentence([names[i] for i in order], moves, cost, negative))
     return tuple(sentences)
 
 
-def _tidy(directions: Directions, floor: float) -> tuple[np.ndarray, np.ndarray]:
-    """Return eigenvalues and vectors of the weak directions, each moving as few as may be.
+def _tidy(directions: Directions) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    """Return values, vectors and signs of the weak directions, each moving as few as may be.
 
     Directions without any information are only known up to mixtures of each other: elimination
     with pivots takes apart what has nothing to do with each other.
     """
     weak = np.asarray(directions.weak)
-    values, rows = np.asarray(directions.information)[weak], np.array(directions.vectors)[weak]
-    empty = np.flatnonzero(np.abs(values) <= floor)
+    rows = np.array(directions.vectors)[weak]
+    empty = np.flatnonzero(np.asarray(directions.unresolved)[weak])
     for k in empty:
         pivot = np.abs(rows[k]).argmax()
         for other in empty[empty != k]:
             rows[other] -= rows[k] * rows[other, pivot] / rows[k, pivot]
-    return values, rows
+    return np.asarray(directions.information)[weak], rows, np.asarray(directions.negative)[weak]
 
 
 def _move(name: str, change: Any, absolute: bool) -> str:
@@ -237,7 +245,7 @@ def _sentence(names: list[str], moves: list[str], cost: Any, negative: Any) -> s
             f"{cost:.2g}. Refine the fit first."
         )
     what = "trade off" if len(names) > 1 else "is hardly informed"
-    return f"{listed} {what}: {together} changes the log-likelihood by less than {cost:.2g}."
+    return f"{listed} {what}: {together} changes the log-likelihood by less than {1.05 * cost:.2g}."
 
 
 def _join(words: list[str]) -> str:

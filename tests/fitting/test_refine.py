@@ -100,7 +100,7 @@ def test_convergence_is_quadratic(samples):
     assert np.all(orders > 1.7)
 
 
-def test_fisher_scoring(samples):
+def test_fisher_scoring(samples, batch_fit):
     y = samples[1]
     # Expected information of a Student t of v degrees of freedom: location (v + 1) / (v + 3) n /
     # scale^2, log scale 2 v / (v + 3) n (Lange, Little and Taylor 1989, from memory).
@@ -109,7 +109,7 @@ def test_fisher_scoring(samples):
     )
     loss = lambda q: heavy_tails(q, y)
     scoring = jax.jit(lambda p: refine(loss, p, SHAPE, curvature=curvature))(start())
-    newton = jax.jit(lambda p: refine(loss, p, SHAPE))(start())
+    newton = jax.tree.map(lambda v: v[1], batch_fit(start(), samples))
     assert scoring.status == newton.status == Status.CONVERGED
     assert abs(scoring.params["centre"] - newton.params["centre"]) < 1e-4
     assert abs(scoring.loss - newton.loss) < 1e-9
@@ -152,15 +152,23 @@ def test_stalled():
     assert fit.status == Status.STALLED and abs(fit.params) < 1e-4
 
 
-def test_batch_equals_loop(samples, batch_fit):
+def test_batch_equals_loop_and_traces_once(samples, batch_fit):
     together = batch_fit(start(), samples)
     assert jnp.all(together.status == Status.CONVERGED)
-    alone = jax.jit(lambda p, y: refine(lambda q: heavy_tails(q, y), p, SHAPE))
+    traces = []
+
+    def loss(params, y):
+        traces.append(1)
+        return heavy_tails(params, y)
+
+    alone = jax.jit(lambda p, y: refine(lambda q: loss(q, y), p, SHAPE))
     for k in range(len(samples)):
         one = alone(start(), samples[k])
         assert one.steps == together.steps[k]
         for name in SHAPE:
             np.testing.assert_allclose(one.params[name], together.params[name][k], rtol=1e-12)
+    # The check of the shape, and the one evaluation in the loop.
+    assert len(traces) == 2
 
 
 def test_one_bad_recording_leaves_the_others_alone(samples, batch_fit):
@@ -171,21 +179,6 @@ def test_one_bad_recording_leaves_the_others_alone(samples, batch_fit):
     rest = np.array([0, 1, 3])
     for a, b in zip(jax.tree.leaves(good), jax.tree.leaves(bad), strict=True):
         np.testing.assert_array_equal(a[rest], b[rest])
-
-
-def test_traces_once(samples):
-    traces = []
-
-    def loss(params, y):
-        traces.append(1)
-        return heavy_tails(params, y)
-
-    fit = jax.jit(lambda p, y: refine(lambda q: loss(q, y), p, SHAPE))
-    fit(start(), samples[0])
-    first = len(traces)
-    fit({"centre": start()["scale"], "scale": 2 * start()["scale"]}, samples[1])
-    # The check of the shape and the one evaluation in the loop.
-    assert len(traces) == first == 2
 
 
 def test_fixed_stays_fixed(samples):

@@ -3,7 +3,7 @@ import jax.numpy as jnp
 import numpy as np
 import pytest
 
-from oscillib.fitting import describe_directions, refine, weak_directions
+from oscillib.fitting import describe_directions, laplace, refine, weak_directions
 from oscillib.parameters import Free, Interval, Positive
 
 
@@ -123,6 +123,7 @@ def test_zero_value_and_many_parameters_in_words():
     ones = found._replace(
         information=jnp.zeros(8),
         weak=jnp.arange(8) == 0,
+        unresolved=jnp.arange(8) == 0,
         vectors=jnp.ones((8, 8)),
     )
     (words,) = describe_directions(ones, params, {"x": Free()})
@@ -130,18 +131,30 @@ def test_zero_value_and_many_parameters_in_words():
 
 
 def test_unidentifiable_product_after_a_fit():
-    # Only the product of two free parameters enters: the Hessian's null direction is curved.
-    y = 6.0 + jnp.asarray(np.random.default_rng(3).normal(size=50))
-    constraints = {"a": Free(), "b": Free(), "offset": Interval(-3.0, 3.0)}
-    params = {"a": jnp.asarray(1.0), "b": jnp.asarray(1.5), "offset": jnp.asarray(0.5)}
-    loss = lambda p: jnp.sum((y - p["a"] * p["b"]) ** 2) / 2 + 50 * (p["offset"] - 1) ** 2
+    # Only the product of two free parameters enters: the Hessian's null direction is curved, and
+    # what is left of the gradient gives it a curvature of either sign. The less noise there is,
+    # the more of that counts.
+    rng = np.random.default_rng(3)
+    times = jnp.linspace(0.0, 6.0, 40)
+    constraints = {"a": Free(), "b": Free(), "phase": Interval(-3.0, 3.0)}
 
-    def both(params):
-        fit = refine(loss, params, constraints)
-        return weak_directions(fit.curvature, fit.params, constraints)
+    def both(a, y, noise):
+        params = {"a": a, "b": jnp.asarray(1.5), "phase": jnp.asarray(0.8)}
+        wave = lambda p: p["a"] * p["b"] * jnp.sin(times + p["phase"])
+        loss = lambda p: jnp.sum(((y - wave(p)) / noise) ** 2) / 2
+        return laplace(loss, refine(loss, params, constraints).params, constraints)
 
-    found = jax.jit(both)(params)
-    np.testing.assert_array_equal(found.refused, [True, True, False])
+    noise = jnp.repeat(jnp.array([1.0, 1e-2, 1e-4]), 20)
+    y = 6 * jnp.sin(times + 1)[None] + noise[:, None] * jnp.asarray(rng.normal(size=(60, 40)))
+    out = jax.jit(jax.vmap(both))(jnp.asarray(1 + 3 * rng.random(60)), y, noise)
+    assert jnp.all(out.refused["a"] & out.refused["b"] & ~out.refused["phase"])
+    assert not out.directions.negative.any()
+    # Closed form: information about the phase, apart from the amplitude.
+    error = noise / (6 * jnp.sqrt(jnp.sum(jnp.cos(times + 1) ** 2)))
+    correlation = jnp.corrcoef(jnp.stack([jnp.cos(times + 1), jnp.sin(times + 1)]))[0, 1]
+    assert abs(correlation) < 0.2
+    ratio = out.standard_error["phase"] / error
+    assert jnp.all((ratio > 0.8) & (ratio < 1.25))
 
 
 def test_jit_vmap_float32_and_non_finite():
@@ -160,5 +173,7 @@ def test_errors_name_what_is_wrong(user_errors):
     params, constraints = triple()
     with pytest.raises(ValueError, match="`information` must have shape"):
         weak_directions(jnp.eye(2), params, constraints)
+    with pytest.raises(ValueError, match="`gradient` must have shape"):
+        weak_directions(jnp.eye(3), params, constraints, gradient=jnp.ones(2))
     with pytest.raises(ValueError, match="`widths` must have shape"):
         weak_directions(jnp.eye(3), params, constraints, widths=jnp.ones(2))
