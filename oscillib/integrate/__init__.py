@@ -1,8 +1,8 @@
 """Through time: steps, rollout over a fixed grid, windows, and the door to adaptive steps."""
 
 from ._adaptive import AdaptiveRollout as AdaptiveRollout, adaptive_rollout as adaptive_rollout
-from ._delay import delay_rollout as delay_rollout
 from ._bias import StepBias as StepBias, step_bias as step_bias
+from ._delay import delay_rollout as delay_rollout
 from ._noise import (
     NoisyParams as NoisyParams,
     covariance_factor as covariance_factor,

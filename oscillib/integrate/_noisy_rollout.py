@@ -31,7 +31,7 @@ def noisy_rollout(
     t0: Scalar | float = 0.0,
     segment: int | None = None,
 ) -> Float[Array, "time *state"]:
-    """Simulate one path: `y_(k+1) = after(t_k, before(t_k, y_k) + e_k)`.
+    """Simulate one path: `y_(k+1) = after(t_k, matrix before(t_k, y_k) + e_k)`.
 
     The noise of a step depends on the key, the window label and the number of the step, not on
     time and not on how the work is cut up: windows rolled out in parallel with `first` set to the
@@ -95,7 +95,7 @@ def noisy_rollout(
         k, t, interval = x
         advance, factor = prepare(interval) if prepared is None else prepared
         normal = jax.random.normal(noise_key(key, first + k, window=window), (y.size,), y.dtype)
-        y = advance.after(t, advance.before(t, y) + (factor @ normal).reshape(y.shape))
+        y = advance.after(t, advance.into_noise(t, y) + (factor @ normal).reshape(y.shape))
         return y, y
 
     _, ys = segmented_scan(body, y0, xs, segment=segment)

@@ -12,7 +12,7 @@ from ._types import Field, Flow, Step
 
 
 class NoisyAdvance(NamedTuple):
-    """One step of a noisy system: `y' = after(t, before(t, y) + e)`, `e` Gaussian.
+    """One step of a noisy system: `y' = after(t, matrix before(t, y) + e)`, `e` Gaussian.
 
     A noisy step of your own is a function `step(params, h)` that returns this.
 
@@ -20,14 +20,26 @@ class NoisyAdvance(NamedTuple):
         before: `before(t, y) -> y`, what happens until the noise enters.
         covariance: of the noise `e`, on the flattened state, shape `(size, size)`.
         after: `after(t, y) -> y`, what happens afterwards; `t` is the time at which the step began.
+        matrix: propagator of the flattened state between `before` and the noise, shape
+            `(size, size)`; `None` for the identity.
         undo: `undo(t, y) -> y`, the inverse of `after`, or `None` where it has none; only a
             transition density needs it.
+        local: `before` and `after` act on every node (last axis of the state) by itself, so their
+            Jacobians are small blocks. Filters are then several times faster; a wrong `True` makes
+            them wrong.
     """
 
     before: Callable[[Any, Any], Any]
     covariance: Float[Array, "size size"]
     after: Callable[[Any, Any], Any]
+    matrix: Float[Array, "size size"] | None = None
     undo: Callable[[Any, Any], Any] | None = None
+    local: bool = False
+
+    def into_noise(self, t: Any, y: Any) -> Any:
+        """Return the state to which the noise is added: `matrix before(t, y)`."""
+        y = self.before(t, y)
+        return y if self.matrix is None else (self.matrix @ y.reshape(-1)).reshape(y.shape)
 
 
 # step(params, h) -> NoisyAdvance
@@ -35,7 +47,11 @@ NoisyStep: TypeAlias = Callable[[Any, Any], NoisyAdvance]
 
 
 def noisy_strang(
-    outer: Flow, matrix: Callable[[Any], Float[Array, "size size"]], *, rate: Rate = planar_rate
+    outer: Flow,
+    matrix: Callable[[Any], Float[Array, "size size"]],
+    *,
+    rate: Rate = planar_rate,
+    local: bool = True,
 ) -> NoisyStep:
     """Make the splitting step of a noisy network: saturate, turn with exact noise, saturate.
 
@@ -50,10 +66,12 @@ def noisy_strang(
         outer: flow of the nonlinear part, `flow(params, h) -> apply`, applied in half steps.
         matrix: `matrix(params) -> A`, shape `(size, size)`, of the linear part.
         rate: `rate(noise) -> Q`, covariance rate of the noise, Ito; default `planar_rate`.
+        local: the outer flow acts on every node by itself, as the saturation of a Hopf network
+            does; default True. Filters use it; simulation does not.
 
     Returns:
-        A noisy step: `step(params, h) -> NoisyAdvance` with `params` a `NoisyParams`: `params.field`
-        goes to `outer` and `matrix`, `params.noise` to `rate`.
+        A noisy step: `step(params, h) -> NoisyAdvance`. Its `params` are a `NoisyParams`, of which
+        `field` goes to `outer` and `matrix`, `noise` to `rate`.
 
     Example:
         >>> import jax.numpy as jnp
@@ -74,12 +92,14 @@ def noisy_strang(
             matrix(params.field), rate(params.noise), jnp.asarray(h)
         )
         half, back = outer(params.field, h / 2), outer(params.field, -h / 2)
-
-        def before(t, y):
-            del t
-            return (propagator @ half(y).reshape(-1)).reshape(y.shape)
-
-        return NoisyAdvance(before, covariance, lambda t, y: half(y), lambda t, y: back(y))
+        return NoisyAdvance(
+            before=lambda t, y: half(y),
+            covariance=covariance,
+            after=lambda t, y: half(y),
+            matrix=propagator,
+            undo=lambda t, y: back(y),
+            local=local,
+        )
 
     return step
 
@@ -113,7 +133,9 @@ def split_noise(step: Step, *, rate: Rate = planar_rate) -> NoisyStep:
     def noisy(params, h):
         advance = step(params.field, h / 2)
         return NoisyAdvance(
-            advance, h * rate(params.noise), lambda t, y: advance(t + jnp.asarray(h / 2), y)
+            before=advance,
+            covariance=h * rate(params.noise),
+            after=lambda t, y: advance(t + h / 2, y),
         )
 
     return noisy
@@ -155,7 +177,7 @@ def euler_maruyama(field: Field, *, rate: Rate = planar_rate) -> NoisyStep:
             del t
             return y
 
-        return NoisyAdvance(before, h * rate(params.noise), unchanged, unchanged)
+        return NoisyAdvance(before, h * rate(params.noise), unchanged, undo=unchanged)
 
     return step
 
@@ -181,6 +203,6 @@ def without_noise(step: NoisyStep) -> Step:
 
     def quiet(params, h):
         noisy = step(params, h)
-        return lambda t, y: noisy.after(t, noisy.before(t, y))
+        return lambda t, y: noisy.after(t, noisy.into_noise(t, y))
 
     return quiet

@@ -73,7 +73,7 @@ def gaussian_filter(
 ) -> Filtered:
     """Filter a recording: log-likelihood, states, one-step predictions, whitened residuals.
 
-        y_(k+1) = after(before(y_k) + e_k),   values_k = readout(y_k) + reading noise
+        y_(k+1) = after(matrix before(y_k) + e_k),   values_k = readout(y_k) + reading noise
 
     The belief about the state stays Gaussian. `"extended"` carries its covariance by the Jacobians
     of the two maps, `"cubature"` carries `2 size` points through them. Either is exact where maps
@@ -96,7 +96,8 @@ def gaussian_filter(
         t0: time of the first sample, handed on to the step; default 0.
         method: `"extended"` (default) or `"cubature"`.
         substeps: steps an interval; default 1.
-        segment: as in `rollout`: samples between stored beliefs in reverse mode; default `None`.
+        segment: samples between stored beliefs in reverse mode, as in `rollout`; default `None`:
+            one belief a sample is stored.
 
     Returns:
         `Filtered`. Under `jit`, whatever of it is not used is not computed. A blow-up gives a
@@ -148,7 +149,9 @@ def gaussian_filter(
         )  # fmt: skip
 
     xs = (values, mask, intervals.times, intervals.lengths)
-    _, outputs = segmented_scan(body, start, xs, segment=segment)
+    # Reverse mode keeps one belief a sample and recomputes the rest: less to store and to read.
+    kept = jax.checkpoint(body, prevent_cse=False)
+    _, outputs = segmented_scan(kept, start, xs, segment=segment)
     contributions, filtered, predicted, crosses, channel_means, channel_variances, residuals = (
         outputs
     )
@@ -168,7 +171,8 @@ class Intervals:
 
     def __init__(self, step, params, h, count: int, t0, method: Method, substeps: int):
         """Check `h` against the number of intervals and lay out times and lengths."""
-        self.step, self.params, self.method = step, params, method
+        self.step, self.params = step, params
+        self.method: Method = method
         self.substeps = check_count("substeps", substeps)
         dtype = jax.tree.leaves(params)[0].dtype
         h = as_float(h) if hasattr(h, "dtype") else jnp.asarray(h, dtype)
@@ -218,15 +222,17 @@ def _update(belief: Gaussian, reading: Reading, value: Array, seen: Array, noise
     both = seen[:, None] & seen[None, :]
     variance = jnp.where(seen, noise**2, 1)
     total = jnp.where(both, reading.covariance, 0) + jnp.diag(variance)
-    factor = jnp.linalg.cholesky(total)
-    white = solve_triangular(factor, rows, lower=True)
-    residual = solve_triangular(factor, innovation, lower=True)
-    gain = solve_triangular(factor, white, lower=True, trans=1).T
+    inverse, log_determinant = _inverse_and_log_determinant(total)
+    residual = solve_triangular(jnp.linalg.cholesky(total), innovation, lower=True)
+    gain = rows.T @ inverse
     count = jnp.sum(seen).astype(mean.dtype)
-    contribution = -(
-        jnp.sum(residual**2) / 2
-        + jnp.sum(jnp.log(jnp.diag(factor)))
-        + count * jnp.log(2 * jnp.pi).astype(mean.dtype) / 2
+    contribution = (
+        -(
+            innovation @ inverse @ innovation
+            + log_determinant
+            + count * jnp.log(2 * jnp.pi).astype(mean.dtype)
+        )
+        / 2
     )
     # Joseph form (I - KH) P (I - KH)' + K R K', by products with the few rows of H.
     once = covariance - gain @ rows
@@ -235,3 +241,18 @@ def _update(belief: Gaussian, reading: Reading, value: Array, seen: Array, noise
     twice = once - seen_rows.T @ gain.T + (gain * variance[None]) @ gain.T
     mean = mean + (gain @ innovation).reshape(mean.shape)
     return Gaussian(mean, (twice + twice.T) / 2), contribution, residual
+
+
+@jax.custom_jvp
+def _inverse_and_log_determinant(matrix: Array) -> tuple[Array, Array]:
+    factor = jnp.linalg.cholesky(matrix)
+    inverse = solve_triangular(factor, jnp.eye(matrix.shape[0], dtype=matrix.dtype), lower=True)
+    return inverse.T @ inverse, 2 * jnp.sum(jnp.log(jnp.diag(factor)))
+
+
+@_inverse_and_log_determinant.defjvp
+def _(primals, tangents):
+    # Two products, where differentiating the factorisation would take several triangular solves.
+    inverse, log_determinant = _inverse_and_log_determinant(*primals)
+    (change,) = tangents
+    return (inverse, log_determinant), (-inverse @ change @ inverse, jnp.sum(inverse * change))
