@@ -10,6 +10,12 @@ from ._information import (
     outer_product_information as outer_product_information,
 )
 from ._laplace import Laplace as Laplace, laplace as laplace
+from ._many import (
+    Agreement as Agreement,
+    ManyResult as ManyResult,
+    shoot_many as shoot_many,
+    shoot_memory as shoot_memory,
+)
 from ._periodogram import (
     Periodogram as Periodogram,
     default_frequencies as default_frequencies,

@@ -120,8 +120,8 @@ class Shooting(eqx.Module):
         continuity: Continuity | None = None,
         prior: GaussianPrior | None = None,
         start_prior: GaussianPrior | None = None,
-        tolerance: float | None = None,
-        damping: float = 1e-2,
+        tolerance: Any = None,
+        damping: Any = 1e-3,
         max_steps: int = 100,
     ):
         """Check the arguments and lay the recordings out by window."""
@@ -137,6 +137,7 @@ class Shooting(eqx.Module):
         self.values, self.mask, self.windows = values, mask, windows
         count, joined = starts.shape[0], (*starts.shape[:2], -1)
         unknowns = Unknowns(constraints, own, params)
+        _check_readout(readout, unknowns, starts[0, 0], values)
         self.at = Moved(*unknowns.pack(params, count), starts.reshape(joined))
         packed = None
         if prior is not None:
@@ -252,8 +253,8 @@ def shoot(
     continuity: Continuity | None = None,
     prior: GaussianPrior | None = None,
     start_prior: GaussianPrior | None = None,
-    tolerance: float | None = None,
-    damping: float = 1e-2,
+    tolerance: Any = None,
+    damping: Any = 1e-3,
     max_steps: int = 100,
 ) -> ShootingResult:
     """Fit parameters and the start state of every window by damped Gauss-Newton.
@@ -370,3 +371,14 @@ def _check(
     for path, leaf in jax.tree_util.tree_leaves_with_path(params):
         check_same_dtype(f"params{jax.tree_util.keystr(path)}", leaf, "starts", starts)
     check_values("scale", as_float(scale), lambda x: x > 0, "positive")
+
+
+def _check_readout(readout: Callable, unknowns: Unknowns, state: Array, values: Array) -> None:
+    """Raise unless a readout fits the channels: a single number would be broadcast to all."""
+    out = jax.eval_shape(lambda y: readout(y, unknowns.first()), state)
+    if getattr(out, "shape", None) != values.shape[-1:] or out.dtype != values.dtype:
+        got = f"{out.shape} {out.dtype}" if hasattr(out, "shape") else type(out).__name__
+        raise ValueError(
+            "`readout(y, params)` must return one value for each channel of `values`, "
+            f"{values.shape[-1:]} {values.dtype}; got {got}."
+        )

@@ -2,11 +2,12 @@
 
 from typing import Any
 
+import jax
 import jax.numpy as jnp
 from jaxtyping import Array, Float
 
 from .._validate import as_float, check_values
-from ._shooting_verdict import STAGE, Continuity, Pull, Verdict, judge_sum
+from ._shooting_verdict import Continuity, Pull, Verdict, judge_sum
 
 
 class SoftContinuity(Continuity):
@@ -85,7 +86,7 @@ class SoftContinuity(Continuity):
         """Return the strength there is: gaps stay open."""
         return self.strength(pull, information)
 
-    def aim(self, damping):
+    def aim(self, pull, damping):
         """Aim at the whole gap: the penalty says how much of it to close."""
         return jnp.ones_like(damping)
 
@@ -93,11 +94,10 @@ class SoftContinuity(Continuity):
         """Judge by misfit plus penalty."""
         return judge_sum(self, pull, move)
 
-    def after(self, pull, move, strength, aim, verdict):
+    def after(self, pull, move, strength, aim, settled):
         """Go on to the next stage once this one is done."""
         last = self.schedule.shape[0] - 1
-        on = (verdict.decrement <= STAGE * (1 + 2 * move.misfit[1])) & (pull.stage < last)
-        stage = pull.stage + on.astype(jnp.int32)
+        stage = pull.stage + (settled & (pull.stage < last)).astype(jnp.int32)
         return pull._replace(stage=stage, weight=self.schedule[stage].astype(pull.weight.dtype))
 
     def closed(self, pull, gaps):
@@ -120,7 +120,7 @@ class AugmentedContinuity(Continuity):
 
     Arguments:
         scale: unit of a gap in each component, shape `(*state)`; default ones.
-        strength: first weight, relative to what the data say about the starts; default 0.1.
+        strength: first weight, relative to what the data say about the starts; default 1e-4.
         growth: factor on the weight; default 10.
         gap_tolerance: largest gap that counts as closed, in units of `scale`; default
             `eps^0.7`, 1e-11 in float64.
@@ -138,7 +138,7 @@ class AugmentedContinuity(Continuity):
     growth: Float[Array, ""]
     gap_tolerance: Float[Array, ""] | None
 
-    def __init__(self, *, scale=None, strength=0.1, growth=10.0, gap_tolerance=None):
+    def __init__(self, *, scale=None, strength=1e-4, growth=10.0, gap_tolerance=None):
         """Convert and check."""
         self.scale = None if scale is None else as_float(scale)
         self.first, self.growth = as_float(strength), as_float(growth)
@@ -152,18 +152,13 @@ class AugmentedContinuity(Continuity):
 
     def begin(self, gaps, information):
         """Begin without forces."""
-        return Pull(
-            weight=self.first.astype(gaps.dtype) * information,
-            multiplier=jnp.zeros_like(gaps),
-            stage=jnp.zeros((), jnp.int32),
-            bound=jnp.full((), jnp.inf, gaps.dtype),
-        )
+        return _loose(self.first, gaps, information)
 
     def strength(self, pull, information):
         """Return the square root of the weight."""
         return jnp.sqrt(pull.weight)
 
-    def aim(self, damping):
+    def aim(self, pull, damping):
         """Aim at the whole gap: penalty and forces say how much of it to close."""
         return jnp.ones_like(damping)
 
@@ -171,12 +166,11 @@ class AugmentedContinuity(Continuity):
         """Judge by the augmented Lagrangian."""
         return judge_sum(self, pull, move)
 
-    def after(self, pull, move, strength, aim, verdict):
+    def after(self, pull, move, strength, aim, settled):
         """Update the forces, and the weight if need be, once the inner problem is solved."""
         gaps = move.new_gaps
         size = jnp.max(jnp.abs(gaps), initial=0)
-        done = verdict.decrement <= STAGE * (1 + 2 * move.misfit[1])
-        on = done & ~self.closed(pull, gaps)
+        on = settled & ~self.closed(pull, gaps)
         grow = on & (size > pull.bound / 4)
         growth = self.growth.astype(gaps.dtype)
         return Pull(
@@ -206,8 +200,13 @@ class HardContinuity(Continuity):
     `1 / (1 + d)` of each gap; it is accepted by the fall of the misfit as long as gaps stay below
     a bound, or by the fall of the gaps, which lowers the bound.
 
+    Far from the solution a linearised gap says little, so a loose stage comes first: gaps are
+    penalised lightly until a step is below a hundredth of a standard error.
+
     Arguments:
         scale: unit of a gap in each component, shape `(*state)`; default ones.
+        strength: weight of the loose stage, relative to what the data say about the starts;
+            default 1e-4.
         gap_tolerance: largest gap that counts as closed, in units of `scale`; default
             `eps^0.7`, 1e-11 in float64.
 
@@ -220,64 +219,78 @@ class HardContinuity(Continuity):
     """
 
     scale: Float[Array, "*state"] | None
+    first: Float[Array, ""]
     gap_tolerance: Float[Array, ""] | None
 
-    def __init__(self, *, scale=None, gap_tolerance=None):
-        """Convert."""
+    def __init__(self, *, scale=None, strength=1e-4, gap_tolerance=None):
+        """Convert and check."""
         self.scale = None if scale is None else as_float(scale)
+        self.first = as_float(strength)
         self.gap_tolerance = None if gap_tolerance is None else as_float(gap_tolerance)
+        check_values("strength", self.first, lambda x: x > 0, "positive")
 
     def factor(self, joints, n, dtype):
         """Return one over the scale."""
         return _scaled(self.scale, joints, n, dtype)
 
     def begin(self, gaps, information):
-        """Begin with a bound of twice the squared gaps there are."""
-        return Pull(
-            weight=jnp.zeros((), gaps.dtype),
-            multiplier=jnp.zeros_like(gaps),
-            stage=jnp.zeros((), jnp.int32),
-            bound=jnp.sum(gaps**2),
-        )
+        """Begin loose."""
+        return _loose(self.first, gaps, information)
 
     def strength(self, pull, information):
         """Return that of closed gaps; multipliers make up for its not being infinite."""
-        return self.hold(pull, information)
+        return jnp.where(pull.stage == 0, jnp.sqrt(pull.weight), self.hold(pull, information))
 
-    def aim(self, damping):
+    def aim(self, pull, damping):
         """Aim at less of each gap the shorter a step is to be."""
-        return 1 / (1 + damping)
+        return jnp.where(pull.stage == 0, 1, 1 / (1 + damping))
 
     def judge(self, pull, move, information):
         """Judge by the misfit if the step promises to lower it, otherwise by the gaps."""
         before, linear, new = (
             jnp.sum(g**2) / 2 for g in (move.gaps, move.linear_gaps, move.new_gaps)
         )
-        eps = jnp.finfo(before.dtype).eps
-        by_misfit = move.fall >= 1e-4 * information * before
-        by_misfit &= new <= pull.bound
+        by_misfit = (move.fall >= 1e-4 * information * before) & (new <= pull.bound)
         promised = jnp.where(by_misfit, move.fall, before - linear)
         actual = jnp.where(by_misfit, move.misfit[0] - move.misfit[1], before - new)
-        rounding = move.fall <= 32 * eps * move.misfit[0]
+        rounding = move.fall <= 32 * jnp.finfo(before.dtype).eps * move.misfit[0]
         rounding &= information * jnp.maximum(new, before) <= 1e-4
-        return Verdict(actual / promised, rounding, move.bend + move.drag)
+        hard = Verdict(actual / promised, rounding, move.bend + move.drag)
+        loose = judge_sum(self, pull, move)
+        return jax.tree.map(lambda a, b: jnp.where(pull.stage == 0, a, b), loose, hard)
 
-    def after(self, pull, move, strength, aim, verdict):
+    def after(self, pull, move, strength, aim, settled):
         """Take over the multipliers; lower the bound after a step judged by the gaps."""
         force = strength**2 * (move.linear_gaps - (1 - aim) * move.gaps)
         before, new = jnp.sum(move.gaps**2) / 2, jnp.sum(move.new_gaps**2) / 2
         lower = jnp.minimum(pull.bound, jnp.maximum(pull.bound / 2, (before + new) / 2))
-        return pull._replace(
-            multiplier=pull.multiplier + force, bound=jnp.where(new < before, lower, pull.bound)
+        loose = pull.stage == 0
+        on = loose & settled
+        return Pull(
+            weight=jnp.where(on, 0, pull.weight),
+            multiplier=pull.multiplier
+            + jnp.where(loose, jnp.where(on, pull.weight, 0) * move.new_gaps, force),
+            stage=pull.stage + on.astype(jnp.int32),
+            bound=jnp.where(on, 2 * new, jnp.where(new < before, lower, pull.bound)),
         )
 
     def closed(self, pull, gaps):
-        """Tell whether every gap is within the tolerance."""
-        return jnp.max(jnp.abs(gaps), initial=0) <= _tolerance(self.gap_tolerance, gaps.dtype)
+        """Tell whether every gap is within the tolerance, by way of the constraint."""
+        small = jnp.max(jnp.abs(gaps), initial=0) <= _tolerance(self.gap_tolerance, gaps.dtype)
+        return small & (pull.stage > 0)
 
     def yardstick(self, gaps, information):
         """Return the squared gaps in units of what the data can tell about the starts."""
         return information / 2 * jnp.sum(gaps**2)
+
+
+def _loose(first: Array, gaps: Array, information: Array) -> Pull:
+    return Pull(
+        weight=first.astype(gaps.dtype) * jnp.where(information > 0, information, 1),
+        multiplier=jnp.zeros_like(gaps),
+        stage=jnp.zeros((), jnp.int32),
+        bound=jnp.full((), jnp.inf, gaps.dtype),
+    )
 
 
 def _scaled(scale: Array | None, joints: int, n: int, dtype: Any) -> Array:

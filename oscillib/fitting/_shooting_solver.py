@@ -111,10 +111,12 @@ class Solver(eqx.Module):
         return jnp.einsum("jab,rjb->rja", factor, gaps)
 
     def information(self, linear: Linear) -> Array:
-        """Return the greatest curvature of the misfit along a start, per whitened unit."""
+        """Return the usual curvature of the misfit along a start, per whitened unit."""
         columns = linear.columns.starts[:, 1:]
         factor = self.continuity.factor(columns.shape[1], columns.shape[2], columns.dtype)
-        return jnp.max(columns / jnp.sum(factor**2, axis=1)[None], initial=0)
+        if columns.size == 0:
+            return jnp.zeros((), columns.dtype)
+        return jnp.median(columns / jnp.sum(factor**2, axis=1)[None])
 
     def change(
         self, state: ShootingState, damping: Array, strength: Array, targets: Array
@@ -168,7 +170,7 @@ class Solver(eqx.Module):
         information = self.information(state.linear)
         gaps = self.whiten(state.linear.rows.gaps)
         strength = self.continuity.strength(state.pull, information)
-        aim = self.continuity.aim(state.damping)
+        aim = self.continuity.aim(state.pull, state.damping)
         targets = strength * aim * gaps + state.pull.multiplier / strength
         change, scaling, _ = self.change(state, state.damping, strength, targets)
         at = jax.tree.map(jnp.add, state.at, change)
@@ -188,7 +190,10 @@ class Solver(eqx.Module):
         verdict = self.continuity.judge(state.pull, move, information)
         fine = all_finite((linear, change))
         accepted = fine & ((verdict.gain > 1e-3) | verdict.rounding)
-        after = self.continuity.after(state.pull, move, strength, aim, verdict)
+        noise = 1 + 2 * linear.misfit
+        # Under heavy damping a step is short however far the solution is.
+        settled = (verdict.decrement <= 1e-4 * noise) & (state.damping <= 1e-2)
+        after = self.continuity.after(state.pull, move, strength, aim, settled)
         at, linear, pull = jax.tree.map(
             lambda a, b: jnp.where(accepted, a, b),
             (at, linear, after),
@@ -197,7 +202,7 @@ class Solver(eqx.Module):
         gain = jnp.where(verdict.rounding, 1, verdict.gain)
         damping, growth = _new_damping(state, accepted, gain)
         size = jnp.max(jnp.abs(jnp.where(accepted, new_gaps, gaps)), initial=0)
-        small = verdict.decrement <= self.tolerance**2 * (1 + 2 * linear.misfit)
+        small = verdict.decrement <= self.tolerance**2 * noise
         small &= accepted & (state.damping <= 1e-4)
         status = jnp.where(small & self.continuity.closed(pull, new_gaps), Status.CONVERGED, -1)
         eps = jnp.finfo(damping.dtype).eps

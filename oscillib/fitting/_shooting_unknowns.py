@@ -61,6 +61,11 @@ class Unknowns(eqx.Module):
         leaves = self._leaves(self.template)
         return [x for _, o, x in leaves if o], [x for _, o, x in leaves if not o]
 
+    def first(self) -> PyTree:
+        """Return the template's parameters of the first recording."""
+        leaves = [leaf[0] if is_own else leaf for _, is_own, leaf in self._leaves(self.template)]
+        return jax.tree.unflatten(jax.tree.structure(self.constraints), leaves)
+
     def one(self, own: Array, shared: Array, own_template: list[Array]) -> PyTree:
         """Return the parameters of one recording from its flat free values."""
         _, common = self.split_template()

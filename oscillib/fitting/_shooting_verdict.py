@@ -63,10 +63,6 @@ class Verdict(NamedTuple):
     decrement: Float[Array, ""]
 
 
-# A stage is done when a step is below a hundredth of a standard error; here its square.
-STAGE = 1e-4
-
-
 class Continuity(eqx.Module):
     """Settings of how the gaps between windows are treated; one of the three classes below."""
 
@@ -96,7 +92,7 @@ class Continuity(eqx.Module):
         return eps**-0.4 * jnp.sqrt(jnp.where(information > 0, information, 1))
 
     @abstractmethod
-    def aim(self, damping: Array) -> Array:
+    def aim(self, pull: Pull, damping: Array) -> Array:
         """Return the fraction of each gap that a step is to close."""
 
     @abstractmethod
@@ -104,8 +100,8 @@ class Continuity(eqx.Module):
         """Compare what a step promised and what it brought."""
 
     @abstractmethod
-    def after(self, pull: Pull, move: Move, strength: Array, aim: Array, verdict: Verdict) -> Pull:
-        """Return the state after a step that was accepted."""
+    def after(self, pull: Pull, move: Move, strength: Array, aim: Array, settled: Array) -> Pull:
+        """Return the state after a step that was accepted; `settled`: the stage is done."""
 
     @abstractmethod
     def closed(self, pull: Pull, gaps: Array) -> Array:
