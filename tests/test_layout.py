@@ -161,9 +161,3 @@ def test_no_tracked_file_is_empty():
     allowed = {"py.typed"}
     empty = [relative(p) for p in TRACKED if p.exists() and p.stat().st_size == 0]
     assert not [name for name in empty if Path(name).name not in allowed]
-
-
-def test_names_of_test_files_are_unique():
-    # Without packages among the tests, two files of one name cannot be collected together.
-    names = [path.name for path in (ROOT / "tests").rglob("test_*.py")]
-    assert len(set(names)) == len(names)
