@@ -26,15 +26,16 @@ from ._types import Scalar
 _SLOPES = np.array([[-11, 18, -9, 2], [-2, -3, 6, -1], [1, -6, 3, 2], [-2, 9, -18, 11]]) / 6
 
 
-class _Stage(NamedTuple):
-    """Where the past of every edge lies at one stage of a step, and how to interpolate there.
+class _Stages(NamedTuple):
+    """Where the past of every edge lies at some stages of a step, and how to interpolate there.
 
-    Delays are constant, so this is the same in every step: intervals counted from the present, and
-    weights of the two states and the two slopes that enclose each place.
+    Delays are constant, so this is the same in every step: intervals counted from the present,
+    `(stage, edge)`, and weights of the two states and the two slopes that enclose each place,
+    `(stage, 4, edge)`.
     """
 
     interval: Array
-    weights: tuple[Array, Array, Array, Array]
+    weights: Array
 
 
 def delay_rollout(
@@ -117,26 +118,23 @@ def delay_rollout(
     lag = _check_lag(delay, h, samples - 1)
     _check_field(field, params, history, source)
 
-    stages = [_stage(lag, c, samples) for c in (0.0, 0.5, 1.0)]
+    first, later = _stages(lag, (0.0,), samples), _stages(lag, (0.5, 1.0), samples)
     undelayed = (lag == 0)[None]
 
-    def past(buffer, newest, stage, y):
-        arrived = _interpolate(buffer, newest, stage, source)
-        return jnp.where(undelayed, y[:, source], arrived)
+    def slope(t, y, arrived):
+        return field(t, y, jnp.where(undelayed, y[:, source], arrived), params)
 
     def body(carry, k):
         y, buffer = carry
         t, newest = t0 + h * k.astype(dtype), (k + samples - 1) % samples
-        k1 = field(t, y, past(buffer, newest, stages[0], y), params)
+        k1 = slope(t, y, _interpolate(buffer, newest, first, source)[0])
         # Slopes are stored per step. At t0 the slope to the left is the history's, and stays so.
-        buffer = buffer.at[newest, 1].set(h * k1)
-        buffer = buffer.at[newest, 2].set(jnp.where(k == 0, buffer[newest, 2], h * k1))
-        y2 = y + h / 2 * k1
-        k2 = field(t + h / 2, y2, past(buffer, newest, stages[1], y2), params)
-        y3 = y + h / 2 * k2
-        k3 = field(t + h / 2, y3, past(buffer, newest, stages[1], y3), params)
-        y4 = y + h * k3
-        k4 = field(t + h, y4, past(buffer, newest, stages[2], y4), params)
+        left = jnp.where(k == 0, buffer[newest, 2], h * k1)
+        buffer = buffer.at[newest, 1:].set(jnp.stack([h * k1, left]))
+        middle, end = _interpolate(buffer, newest, later, source)
+        k2 = slope(t + h / 2, y + h / 2 * k1, middle)
+        k3 = slope(t + h / 2, y + h / 2 * k2, middle)
+        k4 = slope(t + h, y + h * k3, end)
         y = y + h / 6 * (k1 + 2 * k2 + 2 * k3 + k4)
         return (y, buffer.at[(newest + 1) % samples, 0].set(y)), y
 
@@ -147,35 +145,26 @@ def delay_rollout(
     return jnp.concatenate([history[-1:], ys])
 
 
-def _stage(lag: Array, c: float, samples: int) -> _Stage:
-    """Find the interval that holds `c - lag`, in steps from the present, and its weights."""
-    place = c - lag
+def _stages(lag: Array, fractions: tuple[float, ...], samples: int) -> _Stages:
+    """Find the intervals that hold `fraction - lag`, in steps from the present, and the weights."""
+    place = jnp.asarray(fractions, lag.dtype)[:, None] - lag[None]
     # At the last grid point known the interval before it is used: the one after does not exist yet.
     interval = jnp.clip(jnp.floor(place), 1 - samples, -1)
     s = place - interval
-    weights = (
-        1 - s**2 * (3 - 2 * s),
-        s**2 * (3 - 2 * s),
-        s * (1 - s) ** 2,
-        s**2 * (s - 1),
-    )
-    return _Stage(interval.astype(int), weights)
+    end = s**2 * (3 - 2 * s)
+    weights = jnp.stack([1 - end, end, s * (1 - s) ** 2, s**2 * (s - 1)], axis=1)
+    return _Stages(interval.astype(int), weights)
 
 
-def _interpolate(buffer: Array, newest: Array, stage: _Stage, source: np.ndarray) -> Array:
-    """Return the interpolated past of every edge, shape `(component, edge)`."""
-    start = (newest + stage.interval) % buffer.shape[0]
+def _interpolate(buffer: Array, newest: Array, stages: _Stages, source: np.ndarray) -> Array:
+    """Return the interpolated past of every edge, shape `(stage, component, edge)`."""
+    start = (newest + stages.interval) % buffer.shape[0]
     end = (start + 1) % buffer.shape[0]
-    parts = [
-        buffer[start, 0, :, source],
-        buffer[end, 0, :, source],
-        buffer[start, 1, :, source],
-        buffer[end, 2, :, source],
-    ]
-    total = jnp.zeros_like(parts[0])
-    for weight, part in zip(stage.weights, parts, strict=True):
-        total = total + weight[:, None] * part
-    return total.T
+    sample = jnp.stack([start, end, start, end], axis=1)
+    # Of a sample are kept: the state, the slope to its right, the slope to its left.
+    kept = np.array([0, 0, 1, 2])[None, :, None]
+    parts = buffer[sample, kept, :, source[None, None]]
+    return jnp.einsum("ske,skec->sce", stages.weights, parts)
 
 
 def _history_slopes(history: Array) -> Array:
@@ -209,7 +198,7 @@ def _check_lag(delay: Array, h: Array, most: int) -> Array:
 
 
 def _matching_scalar(name: str, x: Any, history: Array) -> Array:
-    x = x if hasattr(x, "dtype") else jnp.asarray(x, history.dtype)
+    x = as_float(x) if hasattr(x, "dtype") else jnp.asarray(x, history.dtype)
     check_shape(name, x, (), "()")
     check_same_dtype(name, x, "history", history)
     return x

@@ -141,7 +141,11 @@ def test_errors_of_the_state(user_errors, kind):
         (lambda: WilsonCowanParams([1.0], slope=2.0), TypeError, "`slope` is no parameter"),
         (lambda: GoodwinParams([1.0], [1.0], 2.0), ValueError, "`production` must have shape"),
         (lambda: LinearParams([[1.0]]), ValueError, "`local` must have shape"),
-        (lambda: LinearNetwork(kind="both"), ValueError, "`kind` must be 'diffusive'"),
+        (
+            lambda: LinearNetwork(kind="both"),  # pyright: ignore[reportArgumentType]
+            ValueError,
+            "`kind` must be 'diffusive'",
+        ),
     ],
 )
 def test_errors_of_the_parameters(user_errors, make, error, match):

@@ -121,7 +121,7 @@ def test_errors(user_errors):
     with pytest.raises(ValueError, match="`component` must be below 2"):
         coupled(van_der_pol, component=2)(0.0, jnp.zeros((2, 2)), CoupledParams(unit, PAIR))
     with pytest.raises(ValueError, match="`kind` must be"):
-        coupled(van_der_pol, kind="sum")
+        coupled(van_der_pol, kind="sum")  # pyright: ignore[reportArgumentType]
     with pytest.raises(ValueError, match=r"must be Edges.*from_matrix"):
         coupled(van_der_pol).delayed(
             0.0, jnp.zeros((2, 2)), jnp.zeros((2, 1)), CoupledParams(unit, PAIR)

@@ -61,7 +61,11 @@ def test_a_graph_compiles_once_for_all_weights_and_anew_for_another():
         (lambda: Edges([-1], [0], [1.0], nodes=2), ValueError, "`source` must lie in"),
         (lambda: Edges([0, 1], [0], [1.0], nodes=2), ValueError, "`source` must have shape"),
         (lambda: Edges([0.5], [0], [1.0], nodes=2), TypeError, "`source` must hold node numbers"),
-        (lambda: Edges([0], [0], [1.0], nodes=2.0), TypeError, "`nodes` must be a Python int"),
+        (
+            lambda: Edges([0], [0], [1.0], nodes=2.0),  # pyright: ignore[reportArgumentType]
+            TypeError,
+            "`nodes` must be a Python int",
+        ),
         (lambda: received(DENSE, X[:, :3]), ValueError, "`coupling` must have shape"),
         (lambda: received(DENSE, X, kind="sum"), ValueError, "`kind` must be"),
         (

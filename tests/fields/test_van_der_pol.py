@@ -1,3 +1,5 @@
+from typing import Any
+
 import jax
 import numpy as np
 import pytest
@@ -22,7 +24,9 @@ def cycle(compiled, params, *, settle, end, method="DOP853", tolerance=1e-12):
     rising.direction = 1
     peak = lambda t, y: y[1]
     peak.direction = -1
-    more = {} if method == "DOP853" else {"jac": lambda t, y: np.asarray(jacobian(y, params))}
+    more: dict[str, Any] = {}
+    if method == "Radau":
+        more["jac"] = lambda t, y: np.asarray(jacobian(y, params))
     out = solve_ivp(
         field, (0, end), [2.0, 0.0], method=method, rtol=tolerance, atol=tolerance,
         events=(rising, peak), **more,

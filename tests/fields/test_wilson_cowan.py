@@ -26,7 +26,7 @@ def test_period_and_peak(compiled):
     )  # fmt: skip
     times = out.t_events[0]
     assert abs(np.diff(times)[-1] / 2 - 4.9958943041) < 1e-6
-    assert abs(np.max(out.sol(np.linspace(*times[-2:], 4001))[0]) - 0.269659) < 1e-5
+    assert abs(np.max(out.sol(np.linspace(times[-2], times[-1], 4001))[0]) - 0.269659) < 1e-5
 
 
 # Parameters: Wilson & Cowan 1972, figure 4 (from memory); a root search found these.
