@@ -64,8 +64,8 @@ def step_bias(
         >>> print(step_bias(euler_maruyama(field), params, 0.05).growth.round(3))
         0.678
         >>> exact = noisy_strang(field.saturation_flow, field.linear_matrix)
-        >>> print(*(x.round(6) for x in step_bias(exact, params, 0.05)))
-        -0.2 6.0 0.025
+        >>> print(*(f"{x:.6f}" for x in step_bias(exact, params, 0.05)))
+        -0.200000 6.000000 0.025000
 
     Source: linear stability of one step; common practice, no source.
     """

@@ -1,0 +1,99 @@
+"""Noisy steps: exact where linear, weak order 2 elsewhere, right where Euler-Maruyama is not."""
+
+import jax
+import jax.numpy as jnp
+import numpy as np
+import pytest
+
+from oscillib.fields import HopfNetwork, HopfParams
+from oscillib.integrate import (
+    NoisyParams,
+    euler_maruyama,
+    linear_transition,
+    noisy_strang,
+    rk4,
+    split_noise,
+    without_noise,
+)
+
+
+FIELD = HopfNetwork()
+STEPS = {
+    "strang": noisy_strang(FIELD.saturation_flow, FIELD.linear_matrix),
+    "split": split_noise(rk4(FIELD)),
+    "euler": euler_maruyama(FIELD),
+}
+# Gauss-Hermite points: the mean over one step's noise is exact for polynomials up to degree 23.
+NODES, WEIGHTS = np.polynomial.hermite_e.hermegauss(12)
+NORMAL = jnp.asarray(np.stack(np.meshgrid(NODES, NODES), -1).reshape(-1, 2))
+WEIGHT = jnp.asarray(np.outer(WEIGHTS, WEIGHTS).ravel() / WEIGHTS.sum() ** 2)
+
+
+def unit(a, w, s, *, b=1.0):
+    return NoisyParams(HopfParams([a], [w], saturation=[b]), noise=[s])
+
+
+def moment_operator(step, params, h, degree):
+    """How one step maps E[x^i y^j], up to `degree`: a matrix, by least squares on a disc.
+
+    A weak error is a difference of means. Simulation would bury it in sampling error; averaging
+    one step over its noise by quadrature, and steps by powers of a matrix, has none.
+    """
+    powers = [(i, j) for i in range(degree + 1) for j in range(degree + 1 - i)]
+    angle, radius = np.arange(64) * (2 * np.pi / 64), 0.9 * np.sqrt((np.arange(24) + 0.5) / 24)
+    circle = np.stack([np.cos(angle), np.sin(angle)], -1)
+    points = jnp.asarray((radius[:, None, None] * circle).reshape(-1, 2, 1))
+    basis = lambda y: jnp.stack([y[0, 0] ** i * y[1, 0] ** j for i, j in powers])
+    advance = step(params, jnp.asarray(h))
+    factor = jnp.linalg.cholesky(advance.covariance)
+
+    def averaged(y):
+        middle = advance.into_noise(0.0, y)[None] + (NORMAL @ factor.T)[:, :, None]
+        return WEIGHT @ jax.vmap(lambda z: basis(advance.after(0.0, z)))(middle)
+
+    before = jax.jit(jax.vmap(basis))(points)
+    after = jax.jit(jax.vmap(averaged))(points)
+    return np.linalg.lstsq(before, after, rcond=None)[0], np.asarray(basis(points[500])), powers
+
+
+@pytest.mark.parametrize(("name", "order"), [("strang", 2), ("split", 2), ("euler", 1)])
+def test_weak_order_by_regression(name, order):
+    params, end, degree = unit(-0.5, 2.0, 0.25), 1.0, 12
+
+    def mean_square(steps):
+        operator, start, powers = moment_operator(STEPS[name], params, end / steps, degree)
+        out = start @ np.linalg.matrix_power(operator, steps)
+        return out[powers.index((2, 0))] + out[powers.index((0, 2))] + out[powers.index((1, 0))]
+
+    counts = np.array([4, 8, 16, 32] if order == 2 else [32, 64, 128, 256])
+    values = np.array([mean_square(n) for n in counts])
+    # Differences of successive values fall with the order of the error itself.
+    slope = -np.polyfit(np.log(counts[:-1]), np.log(np.abs(np.diff(values))), 1)[0]
+    assert abs(slope - order) < 0.1
+
+
+def test_exact_for_a_linear_network_at_any_step():
+    coupling = jnp.array([[0.0, 0.3], [0.1, 0.0]])
+    field = HopfParams([-0.2, -0.4], [6.0, 5.0], saturation=[0.0, 0.0], coupling=coupling)
+    params = NoisyParams(field, noise=[0.2, 0.3])
+    advance = STEPS["strang"](params, jnp.asarray(3.0))
+    rate = jnp.diag(jnp.array([0.2, 0.3, 0.2, 0.3]) ** 2)
+    propagator, covariance = linear_transition(FIELD.linear_matrix(field), rate, 3.0)
+    y = jnp.array([[1.0, 0.2], [0.3, -0.4]])
+    np.testing.assert_allclose(advance.into_noise(0.0, y).ravel(), propagator @ y.ravel())
+    np.testing.assert_allclose(advance.covariance, covariance)
+
+
+def test_without_noise_is_the_deterministic_splitting():
+    params = unit(0.4, 3.0, 0.3, b=1.5)
+    y = jnp.array([[0.2], [0.1]])
+    for name in STEPS:
+        advance = STEPS[name](params, jnp.asarray(0.1))
+        quiet = without_noise(STEPS[name])(params, jnp.asarray(0.1))
+        np.testing.assert_array_equal(quiet(0.0, y), advance.after(0.0, advance.into_noise(0.0, y)))
+
+
+def test_undo_inverts_the_last_map():
+    advance = STEPS["strang"](unit(0.4, 3.0, 0.3), jnp.asarray(0.5))
+    y = jnp.array([[0.4], [-0.3]])
+    np.testing.assert_allclose(advance.undo(0.0, advance.after(0.0, y)), y, atol=1e-15)
