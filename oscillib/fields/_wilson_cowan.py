@@ -11,14 +11,6 @@ from ._arrays import check_state, matching, scalar
 from ._coupling import Coupling, as_coupling, coupling_constraint, received
 
 
-# The oscillating set of the first paper.
-_DEFAULTS = {
-    "drive_i": 0.0, "ee": 16.0, "ei": 12.0, "ie": 15.0, "ii": 3.0,
-    "slope_e": 1.3, "threshold_e": 4.0, "slope_i": 2.0, "threshold_i": 3.7,
-    "refractory": 1.0, "time_e": 1.0, "time_i": 1.0,
-}  # fmt: skip
-
-
 class WilsonCowanParams(eqx.Module):
     """Parameters of Wilson-Cowan nodes; the defaults are the oscillating set of the first paper.
 
@@ -68,16 +60,41 @@ class WilsonCowanParams(eqx.Module):
     coupling: Coupling
     gain: Float[Array, ""]
 
-    def __init__(self, drive_e, *, coupling=None, gain=None, **others):
+    def __init__(
+        self,
+        drive_e,
+        *,
+        drive_i=None,
+        ee=None,
+        ei=None,
+        ie=None,
+        ii=None,
+        slope_e=None,
+        threshold_e=None,
+        slope_i=None,
+        threshold_i=None,
+        refractory=None,
+        time_e=None,
+        time_i=None,
+        coupling=None,
+        gain=None,
+    ):
         """Convert every array, fill in the defaults, and check shapes and dtypes."""
-        unknown = sorted(set(others) - set(_DEFAULTS))
-        if unknown:
-            raise TypeError(f"`{unknown[0]}` is no parameter; they are {', '.join(_DEFAULTS)}.")
         self.drive_e = as_float(drive_e)
         check_shape("drive_e", self.drive_e, (None,), "(node,)")
         reference = ("drive_e", self.drive_e)
-        for name, default in _DEFAULTS.items():
-            setattr(self, name, matching(name, others.get(name), default, reference))
+        self.drive_i = matching("drive_i", drive_i, 0.0, reference)
+        self.ee = matching("ee", ee, 16.0, reference)
+        self.ei = matching("ei", ei, 12.0, reference)
+        self.ie = matching("ie", ie, 15.0, reference)
+        self.ii = matching("ii", ii, 3.0, reference)
+        self.slope_e = matching("slope_e", slope_e, 1.3, reference)
+        self.threshold_e = matching("threshold_e", threshold_e, 4.0, reference)
+        self.slope_i = matching("slope_i", slope_i, 2.0, reference)
+        self.threshold_i = matching("threshold_i", threshold_i, 3.7, reference)
+        self.refractory = matching("refractory", refractory, 1.0, reference)
+        self.time_e = matching("time_e", time_e, 1.0, reference)
+        self.time_i = matching("time_i", time_i, 1.0, reference)
         self.coupling = as_coupling("coupling", coupling, reference)
         self.gain = scalar("gain", gain, 1.0, reference)
 

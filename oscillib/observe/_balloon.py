@@ -1,6 +1,6 @@
 """The haemodynamic balloon model: from activity to the blood-oxygen signal."""
 
-from typing import Literal
+from typing import Any, Literal
 
 import equinox as eqx
 import jax
@@ -12,10 +12,6 @@ from ..parameters import Constraint, Fixed, Free, Positive
 from ._driven import observer_rows
 
 
-_DEFAULTS = {
-    "decay": 0.65, "autoregulation": 0.41, "transit": 0.98, "exponent": 0.32,
-    "extraction": 0.34, "volume": 0.02, "ratio": 1.43,
-}  # fmt: skip
 # Of the revised signal, at 1.5 tesla: frequency offset at the surface of magnetised vessels (1/s),
 # slope of the relaxation rate within them against oxygen extraction (1/s), echo time (s).
 _OFFSET, _SLOPE, _ECHO = 40.3, 25.0, 0.04
@@ -39,7 +35,7 @@ class BalloonParams(eqx.Module):
 
     Raises:
         ValueError: shapes differ.
-        TypeError: dtypes differ; an unknown name.
+        TypeError: dtypes differ.
 
     Example:
         >>> from oscillib.observe import BalloonParams
@@ -59,19 +55,34 @@ class BalloonParams(eqx.Module):
     volume: Float[Array, " node"]
     ratio: Float[Array, " node"]
 
-    def __init__(self, efficacy, **others):
+    def __init__(
+        self,
+        efficacy,
+        *,
+        decay=None,
+        autoregulation=None,
+        transit=None,
+        exponent=None,
+        extraction=None,
+        volume=None,
+        ratio=None,
+    ):
         """Convert every array, fill in the defaults, and check shapes and dtypes."""
-        unknown = sorted(set(others) - set(_DEFAULTS))
-        if unknown:
-            raise TypeError(f"`{unknown[0]}` is no parameter; they are {', '.join(_DEFAULTS)}.")
         self.efficacy = as_float(efficacy)
         check_shape("efficacy", self.efficacy, (None,), "(node,)")
-        for name, default in _DEFAULTS.items():
-            given = others.get(name)
-            x = jnp.full_like(self.efficacy, default) if given is None else as_float(given)
-            check_shape(name, x, self.efficacy.shape, "(node,)")
-            check_same_dtype(name, x, "efficacy", self.efficacy)
-            setattr(self, name, x)
+        self.decay = self._matching("decay", decay, 0.65)
+        self.autoregulation = self._matching("autoregulation", autoregulation, 0.41)
+        self.transit = self._matching("transit", transit, 0.98)
+        self.exponent = self._matching("exponent", exponent, 0.32)
+        self.extraction = self._matching("extraction", extraction, 0.34)
+        self.volume = self._matching("volume", volume, 0.02)
+        self.ratio = self._matching("ratio", ratio, 1.43)
+
+    def _matching(self, name: str, value: Any, default: float) -> Array:
+        x = jnp.full_like(self.efficacy, default) if value is None else as_float(value)
+        check_shape(name, x, self.efficacy.shape, "(node,)")
+        check_same_dtype(name, x, "efficacy", self.efficacy)
+        return x
 
     def constraints(self) -> "BalloonParams":
         """Return the usual constraints: efficacy free, decay and transit positive, others fixed.

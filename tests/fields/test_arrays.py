@@ -138,7 +138,7 @@ def test_errors_of_the_state(user_errors, kind):
         ),
         (lambda: KuramotoParams([1.0], lag=[0.1]), ValueError, "`lag` must have shape"),
         (lambda: KuramotoParams([1.0], [[1.0, 2.0]]), ValueError, "`coupling` must have shape"),
-        (lambda: WilsonCowanParams([1.0], slope=2.0), TypeError, "`slope` is no parameter"),
+        (lambda: WilsonCowanParams([1.0], ee=2.0), ValueError, "`ee` must have shape"),
         (lambda: GoodwinParams([1.0], [1.0], 2.0), ValueError, "`production` must have shape"),
         (lambda: LinearParams([[1.0]]), ValueError, "`local` must have shape"),
         (
