@@ -19,7 +19,9 @@ def with_gradient():
 
     def loss(times, values, mask, frequencies):
         p = periodogram(times, values, mask, frequencies)
-        return (p.power**2).sum() + p.amplitude.sum() + jnp.cos(p.phase).sum() + p.offset.sum()
+        # The offsets are near 5: a small sum keeps the digits of finite differences.
+        small = jnp.cos(p.phase) + p.offset - 5
+        return (p.power**2).sum() + p.amplitude.sum() + small.sum()
 
     return jax.jit(jax.value_and_grad(loss, argnums=(1, 3)))
 
@@ -117,7 +119,7 @@ def test_channel_without_samples(compiled, with_gradient, irregular):
 def test_gradient_is_the_central_difference(with_gradient, irregular):
     times, values, mask, w = irregular
     gradients = with_gradient(times, values, mask, w)[1]
-    rng, h = np.random.default_rng(2), 1e-6
+    rng, h = np.random.default_rng(2), 1e-5
     dv, dw = rng.normal(size=values.shape), rng.normal(size=w.shape)
     for step_v, step_w, gradient in ((dv, 0 * dw, gradients[0]), (0 * dv, dw, gradients[1])):
         ahead, _ = with_gradient(times, values + h * step_v, mask, w + h * step_w)
