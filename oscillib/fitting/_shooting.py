@@ -22,7 +22,7 @@ from ._collapse import collapse
 from ._shooting_continuity import HardContinuity
 from ._shooting_residual import Moved, Residual, lay_out
 from ._shooting_solver import Record, ShootingState, Solver
-from ._shooting_unknowns import Unknowns
+from ._shooting_unknowns import Unknowns, check_start
 from ._shooting_verdict import Continuity
 from ._status import Status
 
@@ -45,7 +45,8 @@ class ShootingResult(NamedTuple):
     """What a windowed fit found. With `own`, arrays of a recording have a leading recording axis.
 
     Attributes:
-        status: code of `Status`; only `Status.CONVERGED` is a success.
+        status: code of `Status`; only `Status.CONVERGED` is a success. `COLLAPSED` if a channel is
+            constant in the data or all but constant in the fit, or nothing was observed.
         params: best finite iterate, in the structure of the parameters given.
         starts: start state of each window, `(window, *state)`.
         gaps: end of each window minus start of the next, `(window - 1, *state)`.
@@ -131,6 +132,7 @@ class Shooting(eqx.Module):
         _check(params, starts, windows, values, mask, scale, self.single)
         if constraints is None:
             constraints = jax.tree.map(lambda _: Free(), params)
+        check_start(params, constraints, own)
         if own is None:
             own = jax.tree.map(lambda _: False, params)
             starts, values, mask = starts[None], values[None], mask[None]
@@ -227,7 +229,8 @@ class Shooting(eqx.Module):
         self, state: ShootingState, predicted: Array, norm: Array, covariance: Array
     ) -> Array:
         flat = jax.vmap(collapse)(predicted, self.values, self.mask).collapsed
-        collapsed = jnp.any(flat & jnp.any(self.mask, axis=1))
+        # A channel without any sample says nothing about the rest; none at all is no success.
+        collapsed = jnp.any(flat & jnp.any(self.mask, axis=1)) | ~jnp.any(self.mask)
         unknowns = self.solver.residual.unknowns
         bound = unknowns.at_bound(self.at[:2], state.at[:2], covariance)
         status = jnp.where(state.status == Status.RUNNING, Status.STEP_LIMIT, state.status)

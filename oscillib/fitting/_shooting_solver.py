@@ -8,7 +8,6 @@ import jax.numpy as jnp
 from jax import lax
 from jaxtyping import Array, Bool, Float, Int
 
-from ..parameters import all_finite
 from ._block import (
     Border,
     border_covariance,
@@ -79,7 +78,7 @@ class Solver(eqx.Module):
         dtype = linear.misfit.dtype
         blank = jnp.full(self.max_steps, jnp.nan, dtype)
         gaps = self.whiten(linear.rows.gaps)
-        fine = all_finite(linear)
+        fine = _finite(linear)
         return ShootingState(
             at=at,
             linear=linear,
@@ -116,7 +115,7 @@ class Solver(eqx.Module):
         factor = self.continuity.factor(columns.shape[1], columns.shape[2], columns.dtype)
         if columns.size == 0:
             return jnp.zeros((), columns.dtype)
-        return jnp.median(columns / jnp.sum(factor**2, axis=1)[None])
+        return jnp.sort((columns / jnp.sum(factor**2, axis=1)[None]).ravel())[columns.size // 2]
 
     def change(
         self, state: ShootingState, damping: Array, strength: Array, targets: Array
@@ -158,7 +157,8 @@ class Solver(eqx.Module):
         force = state.pull.multiplier + state.pull.weight * self.whiten(rows.gaps)
         force = jnp.einsum("jba,rjb->rja", factor, force)
         slope = jnp.einsum("rjnx,rjn->rjx", rows.ends, force)
-        starts = gradient.starts.at[:, :-1].add(slope[..., :n]).at[:, 1:].add(-force)
+        before, after = ((0, 0), (1, 0), (0, 0)), ((0, 0), (0, 1), (0, 0))
+        starts = gradient.starts + jnp.pad(slope[..., :n], after) - jnp.pad(force, before)
         border, po = jnp.sum(slope[..., n:], axis=1), gradient.own.shape[1]
         return Moved(
             gradient.own + border[:, :po],
@@ -188,7 +188,7 @@ class Solver(eqx.Module):
             new_gaps=new_gaps,
         )
         verdict = self.continuity.judge(state.pull, move, information)
-        fine = all_finite((linear, change))
+        fine = _finite((linear, change))
         accepted = fine & ((verdict.gain > 1e-3) | verdict.rounding)
         noise = 1 + 2 * linear.misfit
         # Under heavy damping a step is short however far the solution is.
@@ -209,13 +209,10 @@ class Solver(eqx.Module):
         ended = jnp.where(fine, Status.STALLED, Status.NON_FINITE)
         status = jnp.where(damping > eps**-0.75, ended, status).astype(jnp.int32)
         k = state.steps
-        record = Record(
-            state.record.loss.at[k].set(linear.misfit),
-            state.record.gap.at[k].set(size),
-            state.record.decrement.at[k].set(jnp.sqrt(verdict.decrement)),
-            state.record.damping.at[k].set(state.damping),
-            state.record.accepted.at[k].set(accepted),
-        )
+        done = Record(linear.misfit, size, jnp.sqrt(verdict.decrement), state.damping, accepted)
+        # A comparison rather than a scatter, which takes the compiler seconds.
+        here = jnp.arange(self.max_steps, dtype=k.dtype) == k
+        record = jax.tree.map(lambda new, old: jnp.where(here, new, old), done, state.record)
         return ShootingState(at, linear, pull, damping, growth, status, k + 1, record)
 
     def _foresee(self, state: ShootingState, change: Moved) -> tuple[Array, Array, Array]:
@@ -263,3 +260,8 @@ def _new_damping(state: ShootingState, accepted: Array, gain: Array) -> tuple[Ar
 
 def _square(tree: Any) -> Array:
     return jnp.sum(jnp.stack([jnp.sum(x**2) for x in jax.tree.leaves(tree)]))
+
+
+def _finite(tree: Any) -> Array:
+    # One reduction over everything: the compiler copies a long conjunction to wherever it is used.
+    return jnp.all(jnp.isfinite(jnp.concatenate([x.ravel() for x in jax.tree.leaves(tree)])))

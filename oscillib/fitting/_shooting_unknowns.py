@@ -8,7 +8,8 @@ import jax
 import jax.numpy as jnp
 from jaxtyping import Array, PyTree
 
-from ..parameters import Constraint
+from .._validate import is_concrete
+from ..parameters import Constraint, unconstrain
 
 
 class Unknowns(eqx.Module):
@@ -134,3 +135,20 @@ class Unknowns(eqx.Module):
                 strict=True,
             )
         )
+
+
+def check_start(params: PyTree, constraints: PyTree, own: PyTree) -> None:
+    """Raise unless the trees agree and (where known) every start lies inside its constraint."""
+    if own is None:
+        unconstrain(params, constraints)
+        return
+    if jax.tree.structure(own) != jax.tree.structure(params):
+        raise ValueError(
+            f"`own` must have the structure of `params`, {jax.tree.structure(params)}, with a bool "
+            f"at every leaf; got {jax.tree.structure(own)}."
+        )
+    counts = {x.shape[0] for x, o in zip(*map(jax.tree.leaves, (params, own)), strict=True) if o}
+    known = is_concrete(*jax.tree.leaves(params))
+    for r in range(max(counts, default=1) if known else 1):
+        one = jax.tree.map(lambda x, o, r=r: x[r] if o else x, params, own)
+        unconstrain(one, constraints)
