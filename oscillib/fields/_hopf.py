@@ -11,6 +11,7 @@ from jaxtyping import Array, Float
 
 from .._validate import as_float, check_same_dtype, check_shape
 from ..parameters import Constraint, Fixed, Free, OffDiagonal, Positive
+from ._exponential import expm
 
 
 State = Float[Array, "2 node"]
@@ -150,7 +151,7 @@ class HopfNetwork(eqx.Module):
 
     def linear_flow(self, params: HopfParams, h: Float[Array, ""]) -> Callable[[State], State]:
         """Exact flow of growth, rotation and coupling over a time `h` (may be negative)."""
-        propagator = jax.scipy.linalg.expm(h * self.linear_matrix(params))
+        propagator = expm(h * self.linear_matrix(params))
 
         def apply(y: State) -> State:
             check_state(y, params)
@@ -160,7 +161,7 @@ class HopfNetwork(eqx.Module):
 
     def coupling_flow(self, params: HopfParams, h: Float[Array, ""]) -> Callable[[State], State]:
         """Exact flow of the coupling alone over a time `h` (may be negative)."""
-        propagator = jax.scipy.linalg.expm(h * self.coupling_matrix(params))
+        propagator = expm(h * self.coupling_matrix(params))
 
         def apply(y: State) -> State:
             check_state(y, params)

@@ -1,3 +1,5 @@
+from typing import Any
+
 import equinox as eqx
 import jax
 import jax.numpy as jnp
@@ -17,11 +19,12 @@ Z0, T7 = 0.2 + 0.1j, 7.0
 DIFFUSIVE, ADDITIVE = HopfNetwork(), HopfNetwork(kind="additive")
 FLOWS = ("unit_flow", "saturation_flow", "linear_flow", "coupling_flow")
 RNG = np.random.default_rng(0)
+UNKNOWN: Any = "signed"
 
 
 def pair(z):
     z = np.atleast_1d(z)
-    return jnp.asarray(np.stack([z.real, z.imag]))
+    return jnp.asarray(np.stack([np.real(z), np.imag(z)]))
 
 
 def complex_(y):
@@ -371,7 +374,7 @@ def test_params_may_be_built_from_traced_numbers():
             "`frequency` is float32 but `growth` is float64.*Fix",
             lambda: HopfParams([0.0], np.ones(1, np.float32)),
         ),
-        (ValueError, "`kind` must be .* got 'signed'", lambda: HopfNetwork(kind="signed")),
+        (ValueError, "`kind` must be .* got 'signed'", lambda: HopfNetwork(kind=UNKNOWN)),
     ],
 )
 def test_errors_of_construction(user_errors, error, match, build):
