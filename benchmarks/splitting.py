@@ -42,7 +42,7 @@ def make_network(coupling, spread, growth, shear, seed=0):
     rng = np.random.default_rng(seed)
     matrix = rng.exponential(size=(NODES, NODES)) * (1 - np.eye(NODES))
     params = HopfParams(
-        rng.uniform(*growth, NODES),
+        rng.uniform(growth[0], growth[1], NODES),
         2 * np.pi * np.abs(1 + spread * rng.normal(size=NODES)),
         shear=np.full(NODES, shear),
         coupling=matrix * coupling / matrix.sum(axis=1).mean(),

@@ -205,9 +205,9 @@ def test_transforms(name):
     for precision, results in ((jnp.float64, (first, grad)), (jnp.float32, short)):
         for leaf in jax.tree.leaves(results):
             assert leaf.dtype in (precision, jnp.bool_)
-    tolerance = {"rtol": 2e-4, "atol": 2e-5}  # of float32 through some ten operations
-    jax.tree.map(lambda a, b: np.testing.assert_allclose(a, b, **tolerance), short[0], first)
-    jax.tree.map(lambda a, b: np.testing.assert_allclose(a, b, **tolerance), short[2], grad)
+    # Float32 through some ten operations.
+    close = lambda a, b: np.testing.assert_allclose(a, b, rtol=2e-4, atol=2e-5)
+    jax.tree.map(close, (short[0], short[2]), (first, grad))
 
 
 @pytest.mark.parametrize("name", ["unit_flow", "rk4", "windows", "reconstruction", "unconstrain"])

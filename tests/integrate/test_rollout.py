@@ -1,3 +1,5 @@
+from typing import Any
+
 import jax
 import jax.numpy as jnp
 import numpy as np
@@ -142,13 +144,15 @@ def test_scalar_step_is_prepared_once():
 
 
 DECAY = rk4(lambda t, y, params: -y)
+BODY = lambda carry, x: (carry, x)
+FLOAT: Any = 3.0
 
 
 @pytest.mark.parametrize(
     "error, match, call",
     [
         (ValueError, "`steps` must be given", lambda: rollout(DECAY, None, jnp.ones(2), 0.1)),
-        (TypeError, "`steps` .*int.*float", lambda: rollout(DECAY, None, jnp.ones(2), 0.1, 3.0)),
+        (TypeError, "`steps` .*int.*float", lambda: rollout(DECAY, None, jnp.ones(2), 0.1, FLOAT)),
         (ValueError, "`steps` .* got 0", lambda: rollout(DECAY, None, jnp.ones(2), 0.1, 0)),
         (
             ValueError,
@@ -189,18 +193,18 @@ DECAY = rk4(lambda t, y, params: -y)
         (
             TypeError,
             "`segment` must be a Python int",
-            lambda: rollout(DECAY, None, jnp.ones(2), 0.1, 3, segment=2.0),
+            lambda: rollout(DECAY, None, jnp.ones(2), 0.1, 3, segment=FLOAT),
         ),
         (
             ValueError,
             "`segment` must be at least 1; got 0",
-            lambda: segmented_scan(lambda c, x: (c, x), 0.0, jnp.ones(3), segment=0),
+            lambda: segmented_scan(BODY, 0.0, jnp.ones(3), segment=0),
         ),
-        (ValueError, "`xs` must hold at least", lambda: segmented_scan(None, 0.0, None)),
+        (ValueError, "`xs` must hold at least", lambda: segmented_scan(BODY, 0.0, None)),
         (
             ValueError,
             r"`xs` must hold arrays of one length; got \[4, 6\]",
-            lambda: segmented_scan(None, 0.0, (jnp.ones(4), jnp.ones(6)), segment=2),
+            lambda: segmented_scan(BODY, 0.0, (jnp.ones(4), jnp.ones(6)), segment=2),
         ),
     ],
 )

@@ -24,11 +24,11 @@ def runner(step):
         advance = step(params, h)
         return lax.fori_loop(0, count, lambda _, y: advance(0.0, y), y)
 
-    return lambda params, y, count: np.asarray(final(params, y, jnp.asarray(count)))
+    return lambda place, count: np.asarray(final(*place, jnp.asarray(count)))
 
 
-def order(run, params, start, exact):
-    errors = [np.linalg.norm(run(params, start, n) - exact) for n in COUNTS]
+def order(run, place, exact):
+    errors = [np.linalg.norm(run(place, n) - exact) for n in COUNTS]
     return -np.polyfit(np.log(COUNTS), np.log(errors), 1)[0]
 
 
@@ -44,8 +44,10 @@ def network():
 
 @pytest.fixture(scope="module")
 def reference(network):
-    times = jnp.array([0.0, 4.0])
-    out = adaptive_rollout(NET, *network, times, rtol=1e-13, atol=1e-13, solver=diffrax.Dopri8())
+    times, (params, start) = jnp.array([0.0, 4.0]), network
+    out = adaptive_rollout(
+        NET, params, start, times, rtol=1e-13, atol=1e-13, solver=diffrax.Dopri8()
+    )
     assert out.success
     return np.asarray(out.states[-1])
 
@@ -55,16 +57,16 @@ def reference(network):
 @pytest.mark.parametrize("make, expected, tolerance", [(strang, 2, 0.05), (suzuki, 4, 0.2)])
 def test_order(make, expected, tolerance, network, reference):
     run = runner(make(*LINEAR))
-    params, start = HopfParams([0.4], [3.0]), jnp.array([[0.2], [0.1]])
+    place = HopfParams([0.4], [3.0]), jnp.array([[0.2], [0.1]])
     # Closed form to 40 digits; common practice.
     exact = np.array([[0.55491488485800019834], [-0.057203871761378918795]])
-    assert abs(order(run, params, start, exact) - expected) < tolerance
-    assert abs(order(run, *network, reference) - expected) < tolerance
+    assert abs(order(run, place, exact) - expected) < tolerance
+    assert abs(order(run, network, reference) - expected) < tolerance
 
 
 @pytest.mark.parametrize("make, expected, tolerance", [(strang, 2, 0.05), (suzuki, 4, 0.2)])
 def test_order_of_units_against_coupling(make, expected, tolerance, network, reference):
-    assert abs(order(runner(make(*UNIT)), *network, reference) - expected) < tolerance
+    assert abs(order(runner(make(*UNIT)), network, reference) - expected) < tolerance
 
 
 def test_uncoupled_units_are_exact_at_any_step():

@@ -1,5 +1,7 @@
 """The classic failure of fitting a long oscillation, and how windows cure it."""
 
+from typing import Any
+
 import equinox as eqx
 import jax
 import jax.numpy as jnp
@@ -54,6 +56,7 @@ def fit(data, starts, params, *, length, weight, iterations):
     windows = cut(INTERVAL * jnp.arange(STEPS + 1.0), length)
     target, owned = gather(data, windows), windows.owned[..., None]
     optimiser = optax.adam(0.01)
+    leaves: Any = (unconstrain(params, CONSTRAINTS), starts)
 
     def loss(free):
         p = constrain(free[0], CONSTRAINTS, WRONG)
@@ -63,20 +66,21 @@ def fit(data, starts, params, *, length, weight, iterations):
             rolled.gaps, weight=weight
         )
 
-    def update(carry, _):
+    def update(carry: Any, _):
         free, memory = carry
         change, memory = optimiser.update(jax.grad(loss)(free), memory, free)
-        return (optax.apply_updates(free, change), memory), None
+        moved: Any = optax.apply_updates(free, change)
+        return (moved, memory), None
 
     @jax.jit
-    def run(free):
+    def run(free: Any):
         (free, _), _ = jax.lax.scan(update, (free, optimiser.init(free)), length=iterations)
         p = constrain(free[0], CONSTRAINTS, WRONG)
         return p, join(roll_windows(step, p["field"], free[1], windows).states, windows)
 
     # Adam itself divides by powers of an integer count, which strict promotion refuses.
     with jax.numpy_dtype_promotion("standard"):
-        return run((unconstrain(params, CONSTRAINTS), starts))
+        return run(leaves)
 
 
 def test_single_rollout_goes_flat_and_windows_recover_the_frequency(data):

@@ -1,3 +1,5 @@
+from typing import Any
+
 import jax
 import jax.numpy as jnp
 import numpy as np
@@ -9,6 +11,7 @@ from oscillib.integrate import Windows, cut, gather, join, rk4, roll_windows, ro
 
 # Forced, so that a window rolled out at the wrong time shows.
 STEP = rk4(lambda t, y, params: -params * y + jnp.cos(t))
+FLOAT: Any = 2.0
 RATE, START = jnp.asarray(0.3), jnp.array([1.0, -2.0])
 REGULAR = 5.0 + 0.1 * jnp.arange(24.0)
 GAPPED = jnp.delete(REGULAR, jnp.array([7, 8, 9, 20]))
@@ -96,7 +99,7 @@ def test_traced_times_count_as_irregular_and_agree():
             lambda: cut(REGULAR, 24),
         ),
         (ValueError, "`length` must be at least 1; got 0", lambda: cut(REGULAR, 0)),
-        (TypeError, "`length` must be a Python int", lambda: cut(REGULAR, 2.0)),
+        (TypeError, "`length` must be a Python int", lambda: cut(REGULAR, FLOAT)),
         (
             ValueError,
             r"`times` must be strictly increasing .*; got 0.0 at index 1",

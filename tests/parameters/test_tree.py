@@ -1,3 +1,5 @@
+from typing import Any
+
 import equinox as eqx
 import jax
 import jax.numpy as jnp
@@ -53,6 +55,7 @@ def test_optimiser_moves_all_but_the_fixed():
     gradient = jax.grad(loss)(free)
     assert gradient.shear is None
     assert gradient.gain is None
+    updates: Any
     updates, _ = optimiser.update(gradient, optimiser.init(free), free)
     moved = constrain(optax.apply_updates(free, updates), constraints, PARAMS)
     for name in ("growth", "frequency", "saturation"):
