@@ -72,30 +72,30 @@ def eliminate(
     p = rows.own.shape[-1] - n - 1
 
     def widened(block):  # columns (start, parameters, constant) -> with the next start between
-        return jnp.concatenate(
-            [block[:, :n], jnp.zeros((block.shape[0], n), block.dtype), block[:, n:]], axis=1
-        )
+        zeros = jnp.zeros((*block.shape[:-1], n), block.dtype)
+        return jnp.concatenate([block[..., :n], zeros, block[..., n:]], axis=-1)
 
-    def damped(diagonal):
-        return jnp.pad(jnp.diag(diagonal), ((0, 0), (0, p + 1)))
-
-    # Heavy rows come first: Householder steps then keep the light ones to full precision.
+    # Heavy rows come first: Householder steps then keep the light ones to full precision. What
+    # does not depend on the sweep is laid out before it; a step of the sweep should do little.
     eye = jnp.broadcast_to(jnp.eye(n, dtype=weights.dtype), weights.shape)
     continuity = weights @ jnp.concatenate([rows.ends[..., :n], -eye, rows.ends[..., n:]], axis=-1)
     continuity = jnp.concatenate([continuity, targets[..., None]], axis=-1)
+    drag = jax.vmap(jnp.diag)(damping)
+    drag = jnp.concatenate([drag, jnp.zeros((*drag.shape[:2], p + 1), drag.dtype)], axis=-1)
+    light = widened(jnp.concatenate([rows.own[:, :n], drag], axis=1))
+    fixed = jnp.concatenate([continuity, light[:-1]], axis=1)
 
-    def body(carried, window):
-        heavy, own, diagonal = window
-        stack = jnp.concatenate([heavy, widened(jnp.concatenate([carried, own, damped(diagonal)]))])
-        factor = triangle(stack, 2 * n)
-        return factor[n : 2 * n, n:], (factor[:n], factor[2 * n :, 2 * n :])
+    def body(carried, block):
+        factor = triangle(jnp.concatenate([block, carried]), 2 * n)
+        return widened(factor[n : 2 * n, n:]), factor  # the next start becomes the start
 
-    top, rest = rows.own[:, :n], rows.own[:, n:, n:]
-    carried = jnp.zeros((n, n + p + 1), rows.own.dtype)
-    carried, (pivots, border) = lax.scan(body, carried, (continuity, top[:-1], damping[:-1]))
-    last = triangle(jnp.concatenate([carried, top[-1], damped(damping[-1])]), n)
-    pivots = jnp.concatenate([pivots, widened(last[:n])[None]])
-    flat = [block.reshape(-1, p + 1) for block in (border, rest, last[n:, n:])]
+    carried = jnp.zeros((n, 2 * n + p + 1), rows.own.dtype)
+    carried, factors = lax.scan(body, carried, fixed)
+    # Their columns of the next start are zero, so that it makes no difference there is none.
+    last = triangle(jnp.concatenate([light[-1], carried]), 2 * n)
+    pivots = jnp.concatenate([factors[:, :n], last[None, :n]])
+    left = (factors[:, 2 * n :], rows.own[:, n:, n:], last[None, n:])
+    flat = [block[..., -p - 1 :].reshape(-1, p + 1) for block in left]
     return Sweep(pivots, jnp.concatenate(flat))
 
 
@@ -109,11 +109,12 @@ def substitute(
     solved = -jax.vmap(solve_triangular)(pivots[..., :n], right)
 
     def body(following, block):
-        start = block[:, :n] @ following + block[:, n]
+        slope, offset = block
+        start = jnp.sum(slope * following[None], axis=1) + offset
         return start, start
 
     zero = jnp.zeros(n, pivots.dtype)
-    return lax.scan(body, zero, solved, reverse=True)[1]
+    return lax.scan(body, zero, (solved[..., :n], solved[..., n]), reverse=True)[1]
 
 
 class Border(NamedTuple):

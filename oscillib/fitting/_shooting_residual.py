@@ -33,15 +33,11 @@ class Linear(NamedTuple):
     Attributes:
         rows: linearised residuals and gaps, compressed; leading axis of recordings.
         misfit: half the sum of squared residuals, priors included, continuity not.
-        gradient: of the misfit.
-        columns: squared norms of the Jacobian's columns, for the scaling of the damping.
-        predicted: channels at every sample of every window.
+        predicted: channels at every sample of every window; anything past a recording's end.
     """
 
     rows: Rows
     misfit: Float[Array, ""]
-    gradient: Moved
-    columns: Moved
     predicted: Float[Array, "recording window sample channel"]
 
 
@@ -79,7 +75,7 @@ class Residual(eqx.Module):
     def linearise(self, at: Moved) -> Linear:
         """Evaluate residuals, gaps and all derivatives at an iterate."""
         own_template, _ = self.unknowns.split_template()
-        n, po = at.starts.shape[-1], at.own.shape[-1]
+        n = at.starts.shape[-1]
         each = jax.vmap(self._recording, in_axes=(0, None, 0, 0, 0))
         residuals, jacobian, predicted, ends, slopes = each(
             at.own, at.shared, at.starts, own_template, self.data
@@ -90,16 +86,25 @@ class Residual(eqx.Module):
             ends=slopes[:, :-1],
             gaps=ends[:, :-1] - at.starts[:, 1:],
         )
-        slope = jnp.einsum("rkmx,rkm->rkx", jacobian, residuals)
-        square = jnp.sum(jacobian**2, axis=2)
-
-        def split(x):
-            local = jnp.sum(x[..., n:], axis=1)
-            return Moved(local[:, :po], jnp.sum(local[:, po:], axis=0), x[..., :n])
-
         misfit = jnp.sum(residuals**2) / 2
-        linear = Linear(rows, misfit, split(slope), split(square), predicted)
-        return linear if self.prior is None else _with_prior(linear, at, self.prior)
+        for block in self.prior_rows(at):
+            misfit += jnp.sum(block[..., -1] ** 2) / 2
+        return Linear(rows, misfit, predicted)
+
+    def gradient(self, linear: Linear, at: Moved) -> Moved:
+        """Return the gradient of the misfit."""
+        own, prior = linear.rows.own, self.prior_rows(at)
+        # The rows are a triangular factor of the Jacobian and the residuals: J'r = R'r.
+        window = jnp.einsum("rkmx,rkm->rkx", own[..., :-1], own[..., -1])
+        return _by_unknown(
+            window, at, [jnp.einsum("...mx,...m->...x", b[..., :-1], b[..., -1]) for b in prior]
+        )
+
+    def curvature(self, linear: Linear, at: Moved) -> Moved:
+        """Return the curvature of the misfit along each unknown, by Gauss-Newton."""
+        window = jnp.sum(linear.rows.own[..., :-1] ** 2, axis=2)
+        prior = [jnp.sum(b[..., :-1] ** 2, axis=-2) for b in self.prior_rows(at)]
+        return _by_unknown(window, at, prior)
 
     def prior_rows(self, at: Moved) -> tuple[Array, Array]:
         """Return the prior's rows, `(recording, po, po + 1)` and `(ps, ps + 1)`."""
@@ -188,16 +193,12 @@ def lay_out(
     )
 
 
-def _with_prior(linear: Linear, at: Moved, prior: tuple[Moved, Moved]) -> Linear:
-    mean, weight = prior
-    own, shared = weight.own * (at.own - mean.own), weight.shared * (at.shared - mean.shared)
-    gradient, columns = linear.gradient, linear.columns
-    return linear._replace(
-        misfit=linear.misfit + (jnp.sum(own**2) + jnp.sum(shared**2)) / 2,
-        gradient=gradient._replace(
-            own=gradient.own + weight.own * own, shared=gradient.shared + weight.shared * shared
-        ),
-        columns=columns._replace(
-            own=columns.own + weight.own**2, shared=columns.shared + weight.shared**2
-        ),
+def _by_unknown(window: Array, at: Moved, prior: list[Array]) -> Moved:
+    """Split what windows add for `(start, own, shared)` by unknown, and add the prior's part."""
+    n, po = at.starts.shape[-1], at.own.shape[-1]
+    border = jnp.sum(window[..., n:], axis=1)
+    return Moved(
+        own=border[:, :po] + prior[0],
+        shared=jnp.sum(border[:, po:], axis=0) + prior[1],
+        starts=window[..., :n],
     )

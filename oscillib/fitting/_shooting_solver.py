@@ -78,7 +78,7 @@ class Solver(eqx.Module):
         dtype = linear.misfit.dtype
         blank = jnp.full(self.max_steps, jnp.nan, dtype)
         gaps = self.whiten(linear.rows.gaps)
-        fine = _finite(linear)
+        fine = _finite((linear.rows, linear.misfit))
         return ShootingState(
             at=at,
             linear=linear,
@@ -111,18 +111,21 @@ class Solver(eqx.Module):
 
     def information(self, linear: Linear) -> Array:
         """Return the usual curvature of the misfit along a start, per whitened unit."""
-        columns = linear.columns.starts[:, 1:]
-        factor = self.continuity.factor(columns.shape[1], columns.shape[2], columns.dtype)
-        if columns.size == 0:
-            return jnp.zeros((), columns.dtype)
-        return jnp.sort((columns / jnp.sum(factor**2, axis=1)[None]).ravel())[columns.size // 2]
+        n = linear.rows.gaps.shape[-1]
+        curvature = jnp.sum(linear.rows.own[:, 1:, :, :n] ** 2, axis=2)
+        if curvature.size == 0:
+            return jnp.zeros((), curvature.dtype)
+        factor = self.continuity.factor(curvature.shape[1], n, curvature.dtype)
+        whitened = curvature / jnp.sum(factor**2, axis=1)[None]
+        # The median: a few windows can be far more sensitive than the rest.
+        return jnp.sort(whitened.ravel())[whitened.size // 2]
 
     def change(
         self, state: ShootingState, damping: Array, strength: Array, targets: Array
     ) -> tuple[Moved, Moved, Border]:
         """Solve the damped, linearised problem: the change, its scaling, the border's factor."""
         linear, rows = state.linear, state.linear.rows
-        scaling = self._scaling(linear.columns)
+        scaling = _scaling(self.residual.curvature(linear, state.at))
         drag = jax.tree.map(lambda d: jnp.sqrt(damping) * d, scaling)
         joints, n = rows.gaps.shape[1:]
         weights = strength * self.continuity.factor(joints, n, rows.gaps.dtype)
@@ -151,7 +154,7 @@ class Solver(eqx.Module):
 
     def gradient(self, state: ShootingState) -> Moved:
         """Return the gradient of misfit and continuity, forces of a constraint included."""
-        rows, gradient = state.linear.rows, state.linear.gradient
+        rows, gradient = state.linear.rows, self.residual.gradient(state.linear, state.at)
         joints, n = rows.gaps.shape[1:]
         factor = self.continuity.factor(joints, n, rows.gaps.dtype)
         force = state.pull.multiplier + state.pull.weight * self.whiten(rows.gaps)
@@ -188,7 +191,7 @@ class Solver(eqx.Module):
             new_gaps=new_gaps,
         )
         verdict = self.continuity.judge(state.pull, move, information)
-        fine = _finite((linear, change))
+        fine = _finite((linear.rows, linear.misfit, change))
         accepted = fine & ((verdict.gain > 1e-3) | verdict.rounding)
         noise = 1 + 2 * linear.misfit
         # Under heavy damping a step is short however far the solution is.
@@ -232,19 +235,22 @@ class Solver(eqx.Module):
         gaps = rows.gaps + jnp.einsum("rjnx,rjx->rjn", rows.ends, x[:, :-1]) - starts[:, 1:]
         return fall, bend, self.whiten(gaps)
 
-    def _scaling(self, columns: Moved) -> Moved:
-        """Return the root of the curvature along each unknown, starts averaged over windows."""
-        tiny = jnp.finfo(columns.starts.dtype).eps
-        starts = jnp.broadcast_to(
-            jnp.mean(columns.starts, axis=1, keepdims=True), columns.starts.shape
-        )
 
-        def root(square):
-            # An unknown that nothing depends on must still be held by the damping.
-            least = tiny * jnp.max(square, initial=0)
-            return jnp.sqrt(jnp.where(square > least, square, jnp.where(least > 0, least, 1)))
+def _scaling(curvature: Moved) -> Moved:
+    """Return the root of the curvature along each unknown, starts averaged over windows."""
+    tiny = jnp.finfo(curvature.starts.dtype).eps
+    starts = jnp.mean(curvature.starts, axis=1, keepdims=True)
 
-        return Moved(root(columns.own), root(columns.shared), root(starts))
+    def root(square):
+        # An unknown that nothing depends on must still be held by the damping.
+        least = tiny * jnp.max(square, initial=0)
+        return jnp.sqrt(jnp.where(square > least, square, jnp.where(least > 0, least, 1)))
+
+    return Moved(
+        root(curvature.own),
+        root(curvature.shared),
+        root(jnp.broadcast_to(starts, curvature.starts.shape)),
+    )
 
 
 def _new_damping(state: ShootingState, accepted: Array, gain: Array) -> tuple[Array, Array]:
