@@ -1,0 +1,103 @@
+"""Transition density: integrates to one, exact without saturation, right gradient."""
+
+import jax
+import jax.numpy as jnp
+import numpy as np
+import pytest
+import scipy.linalg
+import scipy.stats
+
+from oscillib.fields import HopfNetwork, HopfParams
+from oscillib.integrate import NoisyParams, euler_maruyama, noisy_rollout, rk4, split_noise
+from oscillib.likelihood import transition_log_density
+
+
+FIELD = HopfNetwork()
+
+
+def unit(a, w, s, b=1.0, c=0.0):
+    return NoisyParams(HopfParams([a], [w], saturation=[b], shear=[c]), [s])
+
+
+def density(step, params, y0, ends, h):
+    both = lambda y: jnp.stack([y0, y.reshape(2, 1)])
+    one = lambda y: transition_log_density(step, params, both(y), h=h)[0]
+    return np.asarray(jax.jit(jax.vmap(one))(ends))
+
+
+@pytest.mark.parametrize("h", [0.3, 1.2])
+def test_integrates_to_one_and_has_the_moments_of_the_simulated_step(step, h):
+    params, y0 = unit(0.5, 4.0, 0.5, c=0.7), jnp.array([[0.6], [-0.3]])
+    edge = np.linspace(-2.5, 2.5, 401)
+    grid = np.stack(np.meshgrid(edge, edge, indexing="ij"), -1).reshape(-1, 2)
+    log_density = density(step, params, y0, jnp.asarray(grid), h)
+    # Beyond r^2 = 1 / (b h) no state can end.
+    np.testing.assert_array_equal(np.isneginf(log_density), (grid**2).sum(1) >= 1 / h)
+    weight = np.exp(log_density) * (edge[1] - edge[0]) ** 2
+    np.testing.assert_allclose(weight.sum(), 1, atol=1e-3 if h > 1 else 1e-9)
+    keys = jax.random.split(jax.random.key(0), 40_000)
+    one = lambda key: noisy_rollout(step, params, y0, h, 1, key=key)[-1, :, 0]
+    drawn = np.asarray(jax.jit(jax.vmap(one))(keys))
+    for power in (1, 2):
+        error = 4 * np.std(drawn**power, axis=0) / 200
+        assert np.all(np.abs((drawn**power).mean(0) - weight @ grid**power) < error + 2e-3)
+
+
+def test_exact_without_saturation(step):
+    params, h = unit(-0.3, 4.0, 0.5, b=0.0), 0.9
+    y0 = jnp.array([[0.6], [-0.3]])
+    matrix = np.asarray(FIELD.linear_matrix(params.field))
+    mean = scipy.linalg.expm(h * matrix) @ np.asarray(y0).ravel()
+    # Closed form: s^2 (1 - e^(2ah)) / 2|a| on each component.
+    law = scipy.stats.multivariate_normal(mean, 0.25 * (1 - np.exp(-0.6 * h)) / 0.6 * np.eye(2))
+    ends = np.random.default_rng(0).normal(size=(20, 2))
+    np.testing.assert_allclose(
+        density(step, params, y0, jnp.asarray(ends), h), law.logpdf(ends), rtol=1e-12
+    )
+
+
+def test_blocks_equal_the_dense_determinant_and_intervals_may_differ(step):
+    from oscillib.integrate import noisy_strang
+
+    field = HopfParams([0.2, 0.1], [6.0, 5.0], coupling=[[0.0, 0.5], [0.2, 0.0]])
+    params = NoisyParams(field, [0.3, 0.2])
+    states = noisy_rollout(step, params, jnp.full((2, 2), 0.3), 0.1, 6, key=jax.random.key(0))
+    whole = noisy_strang(FIELD.saturation_flow, FIELD.linear_matrix, local=False)
+    by_blocks = transition_log_density(step, params, states, h=0.1)
+    np.testing.assert_allclose(
+        transition_log_density(whole, params, states, h=0.1), by_blocks, rtol=1e-12
+    )
+    np.testing.assert_allclose(
+        transition_log_density(step, params, states, h=jnp.full(6, 0.1)), by_blocks, rtol=1e-12
+    )
+
+
+def test_gradient_also_where_a_state_is_out_of_reach(step):
+    states = jnp.array([[0.2, 0.1], [0.1, 0.3], [5.0, 5.0]])[:, :, None]
+
+    def first(x):
+        params = NoisyParams(HopfParams(x[:1], x[1:2]), x[2:])
+        return transition_log_density(step, params, states, h=0.5)[0]
+
+    x = jnp.array([0.3, 6.0, 0.4])
+    numeric = [(first(x + 1e-6 * e) - first(x - 1e-6 * e)) / 2e-6 for e in jnp.eye(3)]
+    np.testing.assert_allclose(jax.grad(first)(x), numeric, rtol=1e-6)
+    out = transition_log_density(step, unit(0.3, 6.0, 0.4), states, h=0.5)
+    assert np.isneginf(out[1])
+    assert np.isnan(transition_log_density(step, unit(0.3, 6.0, 0.4), states * jnp.nan, h=0.5)[0])
+
+
+def test_euler_maruyama_and_the_splitting_agree_at_short_intervals(step):
+    params = unit(0.3, 2.0, 0.4)
+    states = noisy_rollout(step, params, jnp.array([[0.5], [0.0]]), 1e-3, 50, key=jax.random.key(0))
+    ours = jnp.sum(transition_log_density(step, params, states, h=1e-3))
+    theirs = jnp.sum(transition_log_density(euler_maruyama(FIELD), params, states, h=1e-3))
+    assert abs(ours - theirs) < 0.5
+
+
+@pytest.mark.usefixtures("user_errors")
+def test_message():
+    with pytest.raises(ValueError, match="`step` must know the inverse of its last map"):
+        transition_log_density(
+            split_noise(rk4(FIELD)), unit(0.3, 2.0, 0.4), jnp.zeros((2, 2, 1)), h=0.1
+        )
