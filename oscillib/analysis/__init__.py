@@ -6,6 +6,7 @@ from ._fixed_point import (
     fixed_point as fixed_point,
     fixed_points as fixed_points,
 )
+from ._floquet import Floquet as Floquet, floquet as floquet
 from ._limit_cycle import (
     CycleGuess as CycleGuess,
     LimitCycle as LimitCycle,

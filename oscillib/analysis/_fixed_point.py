@@ -93,7 +93,7 @@ def fixed_point(
         >>> print(fixed_point(logistic, 3.0, jnp.array([2.0])).state.round(9))
         [3.]
 
-    Source: Levenberg 1944, Marquardt 1963 (from memory).
+    Source: Deuflhard 2004, Newton Methods for Nonlinear Problems (from memory).
     """
     check_floating("y0", y0)
     y0 = jnp.asarray(y0)
@@ -182,7 +182,7 @@ def _spectra(field, params, states, t):
 
 def _distinct(states: np.ndarray, speed: np.ndarray, distance: float):
     """Return one state of each cluster, the one nearest to rest, and the sizes of the clusters."""
-    flat = states.reshape(len(states), -1)
+    flat = states.reshape(len(states), int(np.prod(states.shape[1:])))
     kept: list[int] = []
     counts: list[int] = []
     for i in np.argsort(speed, kind="stable"):

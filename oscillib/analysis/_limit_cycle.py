@@ -1,8 +1,7 @@
-"""Limit cycles by shooting: period, shape, and what becomes of small disturbances."""
+"""Limit cycles by shooting: their period, their shape, and a guess to start from."""
 
 from typing import Any, NamedTuple
 
-import jax
 import jax.numpy as jnp
 from jax import lax
 from jaxtyping import Array, Bool, Float, Int
@@ -11,7 +10,6 @@ from .._validate import check_count, check_floating
 from ..integrate import rollout
 from ..integrate._types import State, Step
 from ._root import RootStatus, default_tolerance, find_root
-from ._spectrum import eigenvalues
 
 
 class CycleGuess(NamedTuple):
@@ -36,11 +34,6 @@ class LimitCycle(NamedTuple):
         states: one turn at equal intervals, the start repeated at the end, `(steps + 1, *state)`.
         low: least value of every entry over the cycle, `(*state)`.
         high: greatest value of every entry, `(*state)`.
-        multipliers: Floquet multipliers as pairs (real, imaginary part), `(size, 2)`, the largest
-            first. One of them is 1, to the error of the step.
-        exponents: their growth rates `log |multiplier| / period`, `(size,)`, per time unit.
-        margin: decay rate of the slowest disturbance, other than a shift along the cycle; positive:
-            the cycle is stable. A scalar, per time unit.
         status: code of `RootStatus`.
         gap: largest entry of the misfit between start and end, units of the state.
     """
@@ -49,9 +42,6 @@ class LimitCycle(NamedTuple):
     states: Float[Array, "time *state"]
     low: Float[Array, "*state"]
     high: Float[Array, "*state"]
-    multipliers: Float[Array, "size 2"]
-    exponents: Float[Array, " size"]
-    margin: Float[Array, ""]
     status: Int[Array, ""]
     gap: Float[Array, ""]
 
@@ -136,20 +126,19 @@ def limit_cycle(
         Phi_T(y) = y,    d . (y - y0) = 0
 
     with `Phi_T` the flow over one period T, cut into `steps` equal steps, and d the direction in
-    which the guess moves. The unknowns are y and log T, found by a damped Newton method. Floquet
-    multipliers are the eigenvalues of the monodromy matrix `d Phi_T / dy`, by forward mode.
+    which the guess moves. The unknowns are y and log T, found by a damped Newton method. What
+    becomes of disturbances of the cycle is told by `floquet`.
 
     What it is worth. The cycle is that of the step: its error falls with the order of the step, so
-    double `steps` to see it. Multipliers are exact to about `eps` times the largest entry of the
-    monodromy matrix; smaller ones are rounding noise. One sweep through a whole period must not
-    amplify errors beyond reach (an unstable multiplier well below `1 / eps`). A guess of twice the
-    period finds the cycle gone through twice. Fields that depend on time are out of scope: their
-    period is known.
+    double `steps` to see it. One sweep through a whole period must not amplify errors beyond reach:
+    an unstable multiplier well below `1 / eps`. Relaxation cycles, much faster here than there,
+    need a close guess. A guess of twice the period finds the cycle gone
+    through twice. Fields that depend on time are out of scope: their period is known. Compile it
+    with `jit` where it is called more than once.
 
-    Derivatives in `params`, in both modes, are those of the implicit function theorem: of any
-    order for `period` and `states` (the start held in its section), once for `multipliers`,
-    `exponents` and `margin`, as `spectrum` says. They mean nothing unless converged, and none flows
-    to `y0` and `period`.
+    Derivatives of period and states in `params`, in both modes and of any order, are those of the
+    implicit function theorem, the start held in its section. They mean nothing unless converged,
+    and none flows to `y0` and `period`.
 
     Arguments:
         step: `step(params, h) -> advance`, differentiable in `h`; every step of this library is.
@@ -162,23 +151,23 @@ def limit_cycle(
         max_steps: Newton steps allowed; default 50.
 
     Returns:
-        The cycle. Nothing raises inside `jit`: look at `status`; where the search ran into a fixed
-        point it is `RootStatus.AT_REST`.
+        The cycle. Nothing raises inside `jit`: look at `status`; where the search shrank to a
+        fixed point, or to no time at all, it is `RootStatus.AT_REST`.
 
     Raises:
         ValueError: the state has fewer than two entries; `steps` or `max_steps` is below 1.
         TypeError: `y0` is not floating.
 
     Example:
-        >>> import jax.numpy as jnp
+        >>> import jax, jax.numpy as jnp
         >>> from oscillib.analysis import limit_cycle
         >>> from oscillib.fields import HopfNetwork, HopfParams
         >>> from oscillib.integrate import rk4
-        >>> p = HopfParams([0.5], [2 * jnp.pi])
         >>> guess = jnp.array([[0.7], [0.0]])
-        >>> cycle = limit_cycle(rk4(HopfNetwork()), p, guess, 1.1, steps=200)
-        >>> print(cycle.period.round(6), cycle.margin.round(6))
-        1.0 1.0
+        >>> find = jax.jit(lambda p: limit_cycle(rk4(HopfNetwork()), p, guess, 1.1, steps=200))
+        >>> cycle = find(HopfParams([0.5], [2 * jnp.pi]))
+        >>> print(cycle.period.round(6), cycle.high.round(6).ravel())
+        1.0 [0.707107 0.707107]
 
     Source: Keller 1968; Seydel, Practical Bifurcation and Stability Analysis (from memory).
     """
@@ -212,34 +201,15 @@ def limit_cycle(
     x0 = jnp.concatenate([y0.reshape(-1), jnp.zeros(1, y0.dtype)])
     allowed = jnp.concatenate([jnp.full(y0.size, 1.0, y0.dtype) * size, jnp.ones(1, y0.dtype)])
     root = find_root(residual, x0, relative * allowed, max_steps)
-    return _describe(turn, root, y0, first)
 
-
-def _describe(turn, root, y0: Array, first: Array) -> LimitCycle:
-    """Go once around the cycle that was found."""
     start, period = root.x[:-1].reshape(y0.shape), first * jnp.exp(root.x[-1])
-    _, after = turn(start, period)
+    end, after = turn(start, period)
     states = jnp.concatenate([start[None], after])
     high, low = _greatest(states), -_greatest(-states)
-
-    flat = lambda x: turn(x.reshape(y0.shape), period)[0].reshape(-1)
-    found = eigenvalues(jax.jacfwd(flat)(start.reshape(-1)))
-    modulus = found.rate**2 + found.frequency**2
-    # By modulus, a conjugate pair with its positive part first.
-    order = jnp.lexsort((-found.frequency, -modulus))
-    multipliers = jnp.stack([found.rate[order], found.frequency[order]], axis=1)
-    exponents = jnp.log(modulus[order]) / (2 * period)
-    along = jnp.argmin((multipliers[:, 0] - 1) ** 2 + multipliers[:, 1] ** 2)
-    others = jnp.where(jnp.arange(y0.size) == along, -jnp.inf, exponents)
-
-    rounding = jnp.sqrt(jnp.finfo(y0.dtype).eps)
-    at_rest = jnp.max(high - low) <= rounding * jnp.max(jnp.abs(y0))
+    at_rest = jnp.max(high - low) <= jnp.sqrt(jnp.finfo(y0.dtype).eps) * size
     fell = (root.status == RootStatus.CONVERGED) & at_rest
     status = jnp.where(fell, RootStatus.AT_REST, root.status).astype(jnp.int32)
-    gap = jnp.max(jnp.abs(after[-1] - start))
-    return LimitCycle(
-        period, states, low, high, multipliers, exponents, -jnp.max(others), status, gap
-    )
+    return LimitCycle(period, states, low, high, status, jnp.max(jnp.abs(end - start)))
 
 
 def _greatest(states: Float[Array, "time *state"]) -> Float[Array, "*state"]:

@@ -1,5 +1,6 @@
 """Phase and amplitude of a rhythm, and its mean frequency."""
 
+from functools import partial
 from typing import NamedTuple
 
 import jax
@@ -95,15 +96,8 @@ def analytic_phase(values: Float[Array, "time *channel"]) -> PhaseAmplitude:
     values = jnp.asarray(values)
     if values.ndim == 0:
         raise ValueError("`values` must have shape (time, *channel); got a scalar.")
-    n = values.shape[0]
-    # Twice the positive frequencies, none of the negative ones; the mean and, at even length, the
-    # highest frequency have no partner and stay.
-    k = jnp.arange(n)
-    weight = jnp.where((k > 0) & (2 * k < n), 2, jnp.where((k == 0) | (2 * k == n), 1, 0))
-    # A column of weights for every channel, and one FFT column each.
-    columns = jnp.fft.fft(values.reshape(n, -1), axis=0)
-    signal = jnp.fft.ifft(columns * weight[:, None].astype(columns.dtype), axis=0)
-    return _polar(jnp.real(signal).reshape(values.shape), jnp.imag(signal).reshape(values.shape))
+    signal = _analytic(values.reshape(values.shape[0], -1))
+    return _polar(*(part.reshape(values.shape) for part in signal))
 
 
 def mean_frequency(
@@ -142,8 +136,8 @@ def mean_frequency(
     check_shape("times", times, (phase.shape[0] if phase.ndim else None,), "(time,)")
     check_same_dtype("times", times, "phase", phase)
     check_values("times", jnp.diff(times), lambda d: d > 0, "strictly increasing")
-    average = jax.vmap(_average_over_turns, in_axes=(1, None))
-    return average(phase.reshape(phase.shape[0], -1), times).reshape(phase.shape[1:])
+    flat = phase.reshape(phase.shape[0], -1)
+    return _average_over_turns(flat, times).reshape(phase.shape[1:])
 
 
 def hopf_phase(
@@ -189,6 +183,20 @@ def hopf_phase(
     return jnp.where(exists, phase, jnp.nan)
 
 
+@jax.jit
+def _analytic(values: Float[Array, "time channel"]) -> tuple[Array, Array]:
+    """Return real and imaginary part of the analytic signal."""
+    n = values.shape[0]
+    # Twice the positive frequencies, none of the negative ones; the mean and, at even length, the
+    # highest frequency have no partner and stay.
+    k = jnp.arange(n)
+    weight = jnp.where((k > 0) & (2 * k < n), 2, jnp.where((k == 0) | (2 * k == n), 1, 0))
+    columns = jnp.fft.fft(values, axis=0)
+    signal = jnp.fft.ifft(columns * weight[:, None].astype(columns.dtype), axis=0)
+    return jnp.real(signal), jnp.imag(signal)
+
+
+@jax.jit
 def _polar(x: Array, y: Array) -> PhaseAmplitude:
     somewhere = x**2 + y**2 > 0
     # arctan2 and the root have no derivative at the origin: both must be kept away from it.
@@ -197,6 +205,8 @@ def _polar(x: Array, y: Array) -> PhaseAmplitude:
     return PhaseAmplitude(jnp.unwrap(jnp.arctan2(y, x), axis=0), radius)
 
 
+@jax.jit
+@partial(jax.vmap, in_axes=(1, None))
 def _average_over_turns(phase: Float[Array, " time"], times: Float[Array, " time"]) -> Array:
     gone = phase - phase[0]
     direction = jnp.where(jnp.max(gone) >= jnp.max(-gone), 1, -1).astype(phase.dtype)

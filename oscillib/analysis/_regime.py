@@ -121,14 +121,10 @@ def regimes(
     check_shape("correlation", correlation, (*shape, 4, 4), "(node, 4, 4)")
     check_same_dtype("correlation", correlation, "params", values)
 
-    derived, error = jax.vmap(_delta_method)(
-        values.reshape(4, -1).T, errors.reshape(4, -1).T, correlation.reshape(-1, 4, 4)
-    )
-    estimate = lambda k: Estimate(derived[:, k].reshape(shape), error[:, k].reshape(shape))
-    probability = _probability_above_zero(values[0], errors[0])
+    derived, probability = _estimates(values, errors, correlation)
     # NaN compares as False: an estimate or error that is not finite decides nothing.
     sign = (probability >= level).astype(jnp.int32) - (probability <= 1 - level).astype(jnp.int32)
-    return Regimes(sign, probability, Estimate(values[0], errors[0]), *map(estimate, range(4)))
+    return Regimes(sign, probability, Estimate(values[0], errors[0]), *derived)
 
 
 def describe_regimes(
@@ -169,6 +165,16 @@ def _stack(name: str, params: HopfParams | HopfUnitParams) -> Float[Array, "4 *n
     for entry in _ORDER:
         check_shape(f"{name}.{entry}", getattr(params, entry), first.shape, "(node,)")
     return jnp.stack([getattr(params, entry) for entry in _ORDER])
+
+
+@jax.jit
+def _estimates(values: Array, errors: Array, correlation: Array) -> tuple[list[Estimate], Array]:
+    shape = values.shape[1:]
+    derived, error = jax.vmap(_delta_method)(
+        values.reshape(4, -1).T, errors.reshape(4, -1).T, correlation.reshape(-1, 4, 4)
+    )
+    pick = lambda k: Estimate(derived[:, k].reshape(shape), error[:, k].reshape(shape))
+    return [pick(k) for k in range(4)], _probability_above_zero(values[0], errors[0])
 
 
 def _probability_above_zero(value: Array, error: Array) -> Array:

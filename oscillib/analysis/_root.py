@@ -8,7 +8,7 @@ import jax
 import jax.numpy as jnp
 import numpy as np
 from jax import lax
-from jax.scipy.linalg import solve_triangular
+from jax.scipy.linalg import lu_factor, lu_solve
 from jaxtyping import Array, Float, Int
 
 
@@ -39,7 +39,7 @@ _WORDS = {
     RootStatus.STEP_LIMIT: "step limit: not converged after the greatest number of steps",
     RootStatus.NON_FINITE: "non-finite: the function or its derivative is not finite at the start",
     RootStatus.STALLED: "stalled: no step comes closer to a root; there may be none nearby",
-    RootStatus.AT_REST: "at rest: the search for a cycle ended at a fixed point",
+    RootStatus.AT_REST: "at rest: the search for a cycle shrank to a single state",
 }
 
 
@@ -88,16 +88,14 @@ class _Search(NamedTuple):
     x: Array
     value: Array
     slope: Array
-    damping: Array
+    length: Array
     steps: Array
     status: Array
 
 
-# The first steps are short where the slopes nearly cancel; each success makes them bolder.
-_FIRST_DAMPING = 1e-3
-_CHANGE = 10.0
-# Beyond this the steps are too short to get anywhere.
-_GREATEST_DAMPING = 1e8
+# A refused step is tried again at a quarter of its length; each success doubles the next one.
+_SHORTER, _LONGER = 0.25, 2.0
+_SHORTEST = 1e-9
 
 
 def default_tolerance(dtype: Any) -> float:
@@ -113,10 +111,13 @@ def find_root(
 ) -> Root:
     """Find a root of as many functions as unknowns, close to `x0`.
 
-    Levenberg-Marquardt with unknowns scaled by their slopes: each step solves
-    `min |F + J p|^2 + damping |D p|^2`. Converged when the undamped step is below `tolerance` in
-    every entry. Derivatives, in both modes and of any order, are those of the implicit function
-    theorem, `dx = -J^-1 dF`; they do not see the iteration, nor `x0`.
+    Damped Newton: `x + length p` with `J p = -F`, accepted where it comes nearer to the root as
+    measured by the old slope, `|J^-1 F|` in units of `tolerance`. That measure is indifferent to
+    the units of functions and unknowns, and falls along p wherever J is regular. Converged when p
+    is below `tolerance`, which is positive, in every entry.
+
+    Derivatives, in both modes and of any order, are those of the implicit function theorem,
+    `dx = -J^-1 dF`; they do not see the iteration, nor `x0`.
     """
     dtype = x0.dtype
     tolerance = lax.stop_gradient(tolerance)
@@ -142,46 +143,39 @@ def _search(function, x0: Array, tolerance: Array, max_steps: int) -> _Search:
         return value, slope
 
     def improve(now: _Search) -> _Search:
-        step = _damped_step(now.slope, now.value, now.damping)
-        remaining = _damped_step(now.slope, now.value, jnp.zeros_like(now.damping))
-        x = now.x + step
+        # The start has not been evaluated yet: doing it here compiles the function only once.
+        first = now.steps == 0
+        correct, solvable = _corrections(now.slope, now.value, tolerance)
+        full = correct(now.value)
+        x = now.x + jnp.where(first, 0, now.length) * full
         value, slope = evaluate(x)
-        better = _finite(value, slope) & (jnp.sum(value**2) <= jnp.sum(now.value**2))
+        finite = jnp.all(jnp.isfinite(value)) & jnp.all(jnp.isfinite(slope))
+        size = lambda step: jnp.linalg.norm(step / tolerance)
+        better = first | (finite & solvable & (size(correct(value)) <= size(full)))
         pick = lambda new, old: jnp.where(better, new, old)
-        damping = pick(now.damping / _CHANGE, now.damping * _CHANGE)
-        steps = now.steps + 1
-        status = jnp.where(steps >= max_steps, RootStatus.STEP_LIMIT, RootStatus.RUNNING)
-        status = jnp.where(damping > _GREATEST_DAMPING, RootStatus.STALLED, status)
-        close = jnp.all(jnp.abs(remaining) <= tolerance)
-        status = jnp.where(close, RootStatus.CONVERGED, status).astype(jnp.int32)
-        return _Search(
-            pick(x, now.x), pick(value, now.value), pick(slope, now.slope), damping, steps, status
-        )
+        length = pick(jnp.minimum(_LONGER * now.length, 1), _SHORTER * now.length)
+        close = solvable & jnp.all(jnp.abs(full) <= tolerance) & ~first
+        status = jnp.where(now.steps >= max_steps, RootStatus.STEP_LIMIT, RootStatus.RUNNING)
+        status = jnp.where(length < _SHORTEST, RootStatus.STALLED, status)
+        status = jnp.where(close, RootStatus.CONVERGED, status)
+        status = jnp.where(first & ~finite, RootStatus.NON_FINITE, status).astype(jnp.int32)
+        best = pick(x, now.x), pick(value, now.value), pick(slope, now.slope)
+        return _Search(*best, length, now.steps + 1, status)
 
-    value, slope = evaluate(x0)
-    status = jnp.where(_finite(value, slope), RootStatus.RUNNING, RootStatus.NON_FINITE)
-    start = _Search(
-        x0,
-        value,
-        slope,
-        jnp.asarray(_FIRST_DAMPING, x0.dtype),
-        jnp.asarray(0, jnp.int32),
-        status.astype(jnp.int32),
-    )
-    return lax.while_loop(lambda now: now.status == RootStatus.RUNNING, improve, start)
+    count = jnp.asarray(0, jnp.int32)
+    eye = jnp.eye(x0.shape[0], dtype=x0.dtype)
+    start = _Search(x0, x0, eye, jnp.ones((), x0.dtype), count, count + int(RootStatus.RUNNING))
+    end = lax.while_loop(lambda now: now.status == RootStatus.RUNNING, improve, start)
+    return end._replace(steps=end.steps - 1)
 
 
-def _damped_step(slope: Array, value: Array, damping: Array) -> Array:
-    """Minimise `|value + slope p|^2 + damping |scale p|^2`, without squaring the condition."""
-    n, eps = value.shape[0], jnp.finfo(value.dtype).eps
-    scale = jnp.linalg.norm(slope, axis=0)
-    scale = jnp.where(scale > 0, scale, 1)
-    # The floor lets a singular slope give a long step that is then refused, rather than NaN.
-    root = jnp.maximum(jnp.sqrt(damping), eps)
-    stacked = jnp.concatenate([slope / scale[None], root * jnp.eye(n, dtype=value.dtype)])
-    q, r = jnp.linalg.qr(stacked)
-    return -solve_triangular(r, q[:n].T @ value) / scale
-
-
-def _finite(value: Array, slope: Array) -> Array:
-    return jnp.all(jnp.isfinite(value)) & jnp.all(jnp.isfinite(slope))
+def _corrections(slope: Array, value: Array, tolerance: Array):
+    """Return `value -> -J^-1 value` and whether J, scaled by its rows and columns, is regular."""
+    row = jnp.abs(slope) @ tolerance
+    row = jnp.where(row > 0, row, 1)
+    factors = lu_factor(slope * tolerance[None] / row[:, None])
+    correct = lambda value: -tolerance * lu_solve(factors, value / row)
+    step = correct(value)
+    left, whole = (value + slope @ step) / row, value / row
+    solvable = jnp.all(jnp.isfinite(step)) & (jnp.linalg.norm(left) <= jnp.linalg.norm(whole) / 2)
+    return correct, solvable
