@@ -156,18 +156,19 @@ def report(name, seconds, steps, errors, base, compile_time=None, memory=None):
     )
 
 
-def time_program(name, build, starts, solution, base=None):
-    """Compile, fit from every start, report, and return the median time."""
-    program, compile_time, memory = compiled(build, jnp.asarray(starts[0]))
+def time_program(name, program, starts, solution=None, base=None):
+    """Fit from every start, report; return the median time and the solution from the truth."""
+    run, compile_time, memory = compiled(program, jnp.asarray(starts[0]))
+    solution = np.asarray(run(jnp.asarray(TRUTH))[0]) if solution is None else solution
     times, steps, errors = [], [], []
     for start in starts:
-        params, _, taken = program(jnp.asarray(start))
+        params, _, taken = run(jnp.asarray(start))
         errors.append(np.abs(params - solution).max())
         steps.append(taken)
-        times.append(best_time(program, jnp.asarray(start)))
+        times.append(best_time(run, jnp.asarray(start)))
     seconds = np.median(times)
     report(name, seconds, np.median(steps), errors, base, compile_time, memory)
-    return seconds
+    return seconds, solution
 
 
 def time_scipy(name, case, starts, solution, base):
@@ -184,10 +185,9 @@ def time_scipy(name, case, starts, solution, base):
 
 def compare(count, quick):
     windows, values = make_work(count)
-    starts, truth = random_params(5), jnp.asarray(TRUTH)
+    starts = random_params(5)
     soft = block_solver(windows, values, SoftContinuity(weight=WEIGHT, schedule=[1e-3, 1.0]))
     hard = block_solver(windows, values, HardContinuity())
-    penalised, unbroken = (np.asarray(jax.jit(f)(truth)[0]) for f in (soft, hard))
 
     print(
         f"\none fit, {count} windows of 20 samples, {2 * count + 3} unknowns; median of five starts"
@@ -196,8 +196,8 @@ def compare(count, quick):
         f"{'solver':36s} {'ms':>10s} {'steps':>6s} {'found':>5s} {'error':>9s} "
         f"{'compile s':>9s} {'memory MB':>9s} {'ratio':>10s}"
     )
-    base = time_program("windowed shooting, same residual", soft, starts, penalised)
-    time_program("windowed shooting, hard continuity", hard, starts, unbroken, base)
+    base, penalised = time_program("windowed shooting, same residual", soft, starts)
+    unbroken = time_program("windowed shooting, hard continuity", hard, starts, base=base)[1]
     for name, linear in {
         "QR (default)": lineax.QR(),
         "Cholesky": lineax.Normal(lineax.Cholesky()),

@@ -40,7 +40,7 @@ from ._shooting_continuity import (
     HardContinuity as HardContinuity,
     SoftContinuity as SoftContinuity,
 )
-from ._shooting_solver import Record as Record, ShootingState as ShootingState
+from ._shooting_solver import ShootingRecord as ShootingRecord, ShootingState as ShootingState
 from ._spectrum_start import SpectrumStart as SpectrumStart, spectrum_start as spectrum_start
 from ._status import Status as Status, describe as describe
 from ._weak import (

@@ -21,7 +21,7 @@ from ..parameters import Free
 from ._collapse import collapse
 from ._shooting_continuity import HardContinuity
 from ._shooting_residual import Moved, Residual, lay_out
-from ._shooting_solver import Record, ShootingState, Solver
+from ._shooting_solver import ShootingRecord, ShootingState, Solver
 from ._shooting_unknowns import Unknowns, check_start
 from ._shooting_verdict import Continuity
 from ._status import Status
@@ -71,7 +71,7 @@ class ShootingResult(NamedTuple):
     gradient_norm: Float[Array, ""]
     covariance: Float[Array, "p p"]
     steps: Int[Array, ""]
-    record: Record
+    record: ShootingRecord
 
 
 class Shooting(eqx.Module):
@@ -143,7 +143,10 @@ class Shooting(eqx.Module):
         self.at = Moved(*unknowns.pack(params, count), starts.reshape(joined))
         packed = None
         if prior is not None:
-            mean, spread = (Moved(*unknowns.pack_like_free(x, count), starts[:0]) for x in prior)
+            mean, spread = (Moved(*unknowns.pack_free(x, count), starts[:0]) for x in prior)
+            for name, x in zip(("mean", "scale"), (mean, spread), strict=True):
+                check_shape(f"prior.{name}", x.own, self.at.own.shape, "(recording, own free)")
+                check_shape(f"prior.{name}", x.shared, self.at.shared.shape, "(shared free,)")
             packed = (mean, jax.tree.map(lambda x: 1 / x, spread))
         on_starts = None
         if start_prior is not None:
@@ -294,7 +297,7 @@ def shoot(
         prior: on the free parameters, see `GaussianPrior`.
         start_prior: on the starts.
         tolerance: a fit has converged when a step is shorter than this many standard errors, times
-            the root of twice the loss (if above 1); default `sqrt(eps)`, 1.5e-8 in float64.
+            `sqrt(1 + 2 loss)`; default `sqrt(eps)`, 1.5e-8 in float64.
         damping: first damping, relative to the curvature along each unknown.
         max_steps: greatest number of steps.
 

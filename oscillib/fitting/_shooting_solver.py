@@ -21,7 +21,7 @@ from ._shooting_verdict import Continuity, Move, Pull
 from ._status import Status
 
 
-class Record(NamedTuple):
+class ShootingRecord(NamedTuple):
     """What each step did; entries past `steps` are NaN (False for `accepted`).
 
     Attributes:
@@ -60,7 +60,7 @@ class ShootingState(NamedTuple):
     growth: Float[Array, ""]
     status: Int[Array, ""]
     steps: Int[Array, ""]
-    record: Record
+    record: ShootingRecord
 
 
 class Solver(eqx.Module):
@@ -87,7 +87,7 @@ class Solver(eqx.Module):
             growth=jnp.asarray(2, dtype),
             status=jnp.where(fine, Status.RUNNING, Status.NON_FINITE).astype(jnp.int32),
             steps=jnp.zeros((), jnp.int32),
-            record=Record(blank, blank, blank, blank, jnp.zeros(self.max_steps, bool)),
+            record=ShootingRecord(blank, blank, blank, blank, jnp.zeros(self.max_steps, bool)),
         )
 
     def step(self, state: ShootingState) -> ShootingState:
@@ -212,7 +212,9 @@ class Solver(eqx.Module):
         ended = jnp.where(fine, Status.STALLED, Status.NON_FINITE)
         status = jnp.where(damping > eps**-0.75, ended, status).astype(jnp.int32)
         k = state.steps
-        done = Record(linear.misfit, size, jnp.sqrt(verdict.decrement), state.damping, accepted)
+        done = ShootingRecord(
+            linear.misfit, size, jnp.sqrt(verdict.decrement), state.damping, accepted
+        )
         # A comparison rather than a scatter, which takes the compiler seconds.
         here = jnp.arange(self.max_steps, dtype=k.dtype) == k
         record = jax.tree.map(lambda new, old: jnp.where(here, new, old), done, state.record)

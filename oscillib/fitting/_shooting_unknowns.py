@@ -27,35 +27,16 @@ class Unknowns(eqx.Module):
 
     def pack(self, params: PyTree, recordings: int) -> tuple[Array, Array]:
         """Return the free values as `(recording, own)` and `(shared,)`."""
-        own, shared = [], []
-        for constraint, is_own, leaf in self._leaves(params):
-            free = jax.vmap(constraint.to_free)(leaf) if is_own else constraint.to_free(leaf)
-            if free is None:
-                continue
-            if is_own:
-                own.append(free.reshape(recordings, -1))
-            else:
-                shared.append(free.ravel())
-        dtype = jax.tree.leaves(self.template)[0].dtype
-        return (
-            jnp.concatenate([jnp.zeros((recordings, 0), dtype), *own], axis=1),
-            jnp.concatenate([jnp.zeros(0, dtype), *shared]),
-        )
+        free = [
+            jax.vmap(constraint.to_free)(leaf) if is_own else constraint.to_free(leaf)
+            for constraint, is_own, leaf in self._leaves(params)
+        ]
+        return self._flatten(free, recordings)
 
-    def pack_like_free(self, free: PyTree, recordings: int) -> tuple[Array, Array]:
+    def pack_free(self, free: PyTree, recordings: int) -> tuple[Array, Array]:
         """Flatten a tree that has the structure of the free leaves, such as a prior's mean."""
         structure = jax.tree.structure(self.constraints)
-        own, shared = [], []
-        for is_own, leaf in zip(self._own(), structure.flatten_up_to(free), strict=True):
-            if leaf is not None:
-                (own if is_own else shared).append(
-                    leaf.reshape(recordings, -1) if is_own else jnp.ravel(leaf)
-                )
-        dtype = jax.tree.leaves(self.template)[0].dtype
-        return (
-            jnp.concatenate([jnp.zeros((recordings, 0), dtype), *own], axis=1),
-            jnp.concatenate([jnp.zeros(0, dtype), *shared]),
-        )
+        return self._flatten(structure.flatten_up_to(free), recordings)
 
     def split_template(self) -> tuple[list[Array], list[Array]]:
         """Return the template's leaves as those with and those without a recording axis."""
@@ -121,6 +102,16 @@ class Unknowns(eqx.Module):
         left = each(*end, own_template) < 1e-4 * each(*begin, own_template)
         loose = ~(jnp.diagonal(covariance, axis1=1, axis2=2) < 100)
         return jnp.any(left & loose)
+
+    def _flatten(self, free: list[Any], recordings: int) -> tuple[Array, Array]:
+        dtype = jax.tree.leaves(self.template)[0].dtype
+        own, shared = [jnp.zeros((recordings, 0), dtype)], [jnp.zeros(0, dtype)]
+        for leaf, is_own in zip(free, self._own(), strict=True):
+            if leaf is not None and is_own:
+                own.append(leaf.reshape(recordings, -1))
+            elif leaf is not None:
+                shared.append(leaf.ravel())
+        return jnp.concatenate(own, axis=1), jnp.concatenate(shared)
 
     def _own(self) -> list[bool]:
         return jax.tree.structure(self.constraints).flatten_up_to(self.own)

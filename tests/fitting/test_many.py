@@ -110,22 +110,28 @@ def single(values, params, first):
     return one.result(one.run(one.init()))
 
 
-def test_side_by_side_in_chunks_and_one_by_one_agree(eight):
-    (values, params, first), together = eight
+def check_same(other, together):
+    np.testing.assert_array_equal(other.steps, together.fits.steps)
+    for name, leaf in other.params.items():
+        np.testing.assert_allclose(leaf, together.fits.params[name], rtol=1e-9)
+    np.testing.assert_allclose(other.covariance, together.fits.covariance, rtol=1e-6, atol=1e-12)
+
+
+def test_chunks_agree(eight):
     # A chunk of three does not divide the eight fits.
-    chunked = fit(values, params, first, chunk=3).fits
+    arguments, together = eight
+    check_same(fit(*arguments, chunk=3).fits, together)
+
+
+@pytest.mark.long
+def test_side_by_side_and_one_by_one_agree(eight):
+    (values, params, first), together = eight
     run = jax.jit(single)
-    looped = [
-        run(values[k], {n: p[k, 0] for n, p in params.items()}, first[k, 0]) for k in range(8)
-    ]
-    looped = jax.tree.map(lambda *x: jnp.stack(x)[:, None], *looped)
-    for other in (chunked, looped):
-        np.testing.assert_array_equal(other.steps, together.fits.steps)
-        for name, leaf in other.params.items():
-            np.testing.assert_allclose(leaf, together.fits.params[name], rtol=1e-9)
-        np.testing.assert_allclose(
-            other.covariance, together.fits.covariance, rtol=1e-6, atol=1e-12
-        )
+    begin = [{name: p[k, 0] for name, p in params.items()} for k in range(8)]
+    one_by_one = [run(values[k], begin[k], first[k, 0]) for k in range(8)]
+    check_same(jax.tree.map(lambda *x: jnp.stack(x)[:, None], *one_by_one), together)
+    check_same(fit(values, params, first, chunk=1).fits, together)
+    check_same(fit(values, params, first, chunk=8).fits, together)
 
 
 def test_halving_and_agreement():

@@ -110,6 +110,11 @@ def test_fitzhugh_nagumo_from_random_starts(hard, least_squares):
     assert (np.abs(hard.params[0] - TRUTH) < 4 * error).all()
 
 
+def test_closed_gaps_are_the_unbroken_rollout(hard):
+    unbroken = rollout(FHN, hard.params[0], hard.starts[0, 0], 0.05, 400)
+    np.testing.assert_allclose(hard.predicted[0], unbroken, atol=1e-9)
+
+
 def test_record_and_gradient(hard):
     steps = int(hard.steps[0])
     assert np.isfinite(hard.record.loss[0, :steps]).all()
@@ -238,6 +243,7 @@ def check_recovery(step, truth, starts, first, interval, continuity, tolerance):
     return exact
 
 
+@pytest.mark.long
 def test_lotka_volterra():
     # Problem B1 of DETEST: Hull, Enright, Fellen & Sedgwick 1972; its end at t = 20 as published.
     starts = jnp.array([[1.0, 1, 1, 1], [0.5, 0.5, 3, 3], [5, 5, 0.3, 0.3], [4, 1, 2, 4]])
