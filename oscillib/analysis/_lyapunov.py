@@ -95,14 +95,13 @@ def lyapunov_spectrum(
     h = jnp.asarray(h, dtype)
     advance = step(params, h)
 
-    def push(k, carry):
+    def push(carry, k):
         y, directions = carry
         along = lambda v: jax.jvp(lambda y: advance(h * k.astype(dtype), y), (y,), (v,))
-        return jax.vmap(along, out_axes=(None, 0))(directions)
+        return jax.vmap(along, out_axes=(None, 0))(directions), None
 
     def block(carry, k):
-        y, directions = carry
-        y, directions = lax.fori_loop(k * every, (k + 1) * every, push, (y, directions))
+        (y, directions), _ = lax.scan(push, carry, k * every + jnp.arange(every))
         q, r = jnp.linalg.qr(directions.reshape(count, size).T)
         return (y, q.T.reshape(directions.shape)), jnp.log(jnp.abs(jnp.diagonal(r)))
 

@@ -4,14 +4,23 @@ import numpy as np
 import pytest
 
 from oscillib.analysis import RootStatus, cycle_guess, floquet, limit_cycle
-from oscillib.fields import HopfNetwork, HopfParams
 from oscillib.integrate import rk4
 
 
 # The Hopf unit of the check values: growth, saturation, shear, angular frequency.
 A, B, C, W = 0.4, 1.5, 0.9, 3.0
-UNIT = rk4(HopfNetwork())
-FIRST = jnp.array([[0.5], [0.05]])
+VALUES = jnp.array([A, B, C, W])
+FIRST = jnp.array([0.5, 0.05])
+
+
+def hopf(t, y, values):
+    a, b, c, w = values
+    r2 = jnp.sum(y**2)
+    growth, turn = a - b * r2, w - c * r2
+    return jnp.stack([growth * y[0] - turn * y[1], turn * y[0] + growth * y[1]])
+
+
+UNIT = rk4(hopf)
 
 
 def van_der_pol(t, y, mu):
@@ -43,32 +52,24 @@ def wilson_cowan(t, y, drive):
     return jnp.stack([-e + (k_e - e) * s_e, -i + (k_i - i) * s_i])
 
 
-def unit(values):
-    a, b, c, w = values
-    return HopfParams(a[None], w[None], shear=c[None], saturation=b[None])
-
-
 @pytest.fixture(scope="module")
 def hopf_cycle():
+    """Cycle and multipliers, and the derivatives of period, radius and margin."""
+
     def find(values):
-        cycle = limit_cycle(UNIT, unit(values), FIRST, 2.3, steps=1500)
-        return cycle, floquet(UNIT, unit(values), cycle)
+        cycle = limit_cycle(UNIT, values, FIRST, 2.3, steps=1500)
+        disturbed = floquet(UNIT, values, cycle)
+        measured = jnp.stack([cycle.period, cycle.high[0], disturbed.margin])
+        return measured, (cycle, disturbed)
 
-    def measured(values):
-        cycle, disturbed = find(values)
-        return jnp.stack([cycle.period, cycle.high[0, 0], disturbed.margin])
-
-    return jax.jit(lambda values: (*find(values), jax.jacrev(measured)(values)))
-
-
-VALUES = jnp.array([A, B, C, W])
+    return jax.jit(jax.jacfwd(find, has_aux=True))
 
 
 def test_hopf_cycle_in_closed_form(hopf_cycle):
     # Radius sqrt(a/b), frequency w - c a/b, multipliers {1, e^(-2aT)}: common practice.
-    cycle, disturbed, _ = hopf_cycle(VALUES)
+    _, (cycle, disturbed) = hopf_cycle(VALUES)
     assert int(cycle.status) == RootStatus.CONVERGED
-    np.testing.assert_allclose(cycle.high[0, 0], 0.5163977794943, atol=1e-10)
+    np.testing.assert_allclose(cycle.high[0], 0.5163977794943, atol=1e-10)
     np.testing.assert_allclose(cycle.low, -0.5163977794943, atol=1e-10)
     np.testing.assert_allclose(2 * np.pi / cycle.period, 2.76, atol=1e-10)
     np.testing.assert_allclose(cycle.period, 2.276516416, atol=1e-9)
@@ -80,7 +81,7 @@ def test_hopf_cycle_in_closed_form(hopf_cycle):
 
 
 def test_derivatives_by_the_implicit_function_theorem(hopf_cycle):
-    *_, slopes = hopf_cycle(VALUES)
+    slopes, _ = hopf_cycle(VALUES)
     omega = W - C * A / B
     period = 2 * np.pi / omega**2 * np.array([C / B, -C * A / B**2, A / B, -1.0])
     radius = np.array([0.5 / np.sqrt(A * B), -0.5 * np.sqrt(A / B**3), 0, 0])
@@ -91,26 +92,28 @@ def test_derivatives_by_the_implicit_function_theorem(hopf_cycle):
 
 def test_unstable_cycle_is_found_and_a_fixed_point_is_told_apart(hopf_cycle):
     # Both signs turned: a repelling cycle of the same radius around a stable origin.
-    cycle, disturbed, _ = hopf_cycle(jnp.array([-A, -B, C, W]))
+    _, (cycle, disturbed) = hopf_cycle(jnp.array([-A, -B, C, W]))
     assert int(cycle.status) == RootStatus.CONVERGED
-    np.testing.assert_allclose(cycle.high[0, 0], np.sqrt(A / B), atol=1e-9)
+    np.testing.assert_allclose(cycle.high[0], np.sqrt(A / B), atol=1e-9)
     np.testing.assert_allclose(disturbed.margin, -2 * A, atol=1e-9)
     # A damped unit has no cycle; a missing guess comes as NaN.
-    damped, *_ = hopf_cycle(jnp.array([-A, B, C, W]))
+    _, (damped, _) = hopf_cycle(jnp.array([-A, B, C, W]))
     assert int(damped.status) != RootStatus.CONVERGED
-    bad, *_ = hopf_cycle(jnp.array([jnp.nan, B, C, W]))
+    _, (bad, _) = hopf_cycle(jnp.array([jnp.nan, B, C, W]))
     assert int(bad.status) == RootStatus.NON_FINITE
 
 
-def test_second_derivative_of_the_period():
+def test_reverse_mode_and_second_derivative_of_the_period():
     # T = 2 pi / (w - c a / b).
     def period(a):
         values = jnp.stack([a, *VALUES[1:]])
-        return limit_cycle(UNIT, unit(values), FIRST, 2.3, steps=200).period
+        return limit_cycle(UNIT, values, FIRST, 2.3, steps=200).period
 
     omega = W - C * A / B
-    found = jax.jit(jax.jacfwd(jax.grad(period)))(jnp.asarray(A))
-    np.testing.assert_allclose(found, 4 * np.pi * (C / B) ** 2 / omega**3, rtol=1e-6)
+    slope = jax.grad(period)
+    first, second = jax.jit(lambda a: jax.jvp(slope, (a,), (jnp.ones_like(a),)))(jnp.asarray(A))
+    np.testing.assert_allclose(first, 2 * np.pi * C / B / omega**2, rtol=1e-6)
+    np.testing.assert_allclose(second, 4 * np.pi * (C / B) ** 2 / omega**3, rtol=1e-6)
 
 
 @pytest.fixture(scope="module")
@@ -157,14 +160,18 @@ def test_van_der_pol_multipliers(van_der_pols):
 
 
 def test_error_falls_with_the_order_of_the_step():
-    sizes = np.array([50, 100, 200])
+    # The same 50 steps, each made of a counted number of smaller ones: one program for all.
+    def step(params, h):
+        mu, parts = params
+        advance = rk4(van_der_pol)(mu, h / parts)
+        return lambda t, y: jax.lax.fori_loop(0, parts.astype(int), lambda _, y: advance(t, y), y)
+
     y0 = jnp.array([2.0, 0.0])
-    errors = []
-    for steps in sizes:
-        find = jax.jit(lambda mu, n=int(steps): limit_cycle(rk4(van_der_pol), mu, y0, 6.6, steps=n))
-        errors.append(abs(float(find(1.0).period) - 6.6632868593231302))
-    order = -np.polyfit(np.log(sizes), np.log(errors), 1)[0]
-    assert 3.7 < order < 4.5
+    find = jax.vmap(lambda parts: limit_cycle(step, (1.0, parts), y0, 6.6, steps=50).period)
+    parts = np.array([1.0, 2.0, 4.0])
+    errors = np.abs(jax.jit(find)(jnp.asarray(parts)) - 6.6632868593231302)
+    order = -np.polyfit(np.log(parts), np.log(errors), 1)[0]
+    assert 3.7 < order < 4.3
 
 
 def from_rollout(field, params, y0, h, steps, per_turn):
@@ -215,8 +222,7 @@ def test_both_precisions_trace_once(single):
     find, traces = single
     for dtype, tolerance in ((jnp.float64, 1e-6), (jnp.float32, 2e-5)):
         for growth in (0.5, 0.7):
-            p = HopfParams(jnp.asarray([growth], dtype), jnp.asarray([3.0], dtype))
-            guess, cycle = find(p, jnp.ones((2, 1), dtype))
+            guess, cycle = find(jnp.asarray([growth, 1, 0, 3], dtype), jnp.ones(2, dtype))
             assert bool(guess.found)
             assert int(cycle.status) == RootStatus.CONVERGED
             assert all(x.dtype == dtype for x in cycle if x.dtype != jnp.int32)
@@ -228,23 +234,23 @@ def test_both_precisions_trace_once(single):
 def test_nothing_found_is_no_success(single):
     find, _ = single
     # At rest there are no crossings.
-    guess, cycle = find(HopfParams([0.5], [3.0]), jnp.zeros((2, 1)))
+    guess, cycle = find(jnp.array([0.5, 1, 0, 3]), jnp.zeros(2))
     assert not bool(guess.found) and np.isnan(guess.period)
     assert int(cycle.status) == RootStatus.NON_FINITE
     # Damped units cross on their way to rest; the search ends there or comes no closer.
-    guess, cycle = find(HopfParams([-0.05], [3.0]), jnp.ones((2, 1)))
+    guess, cycle = find(jnp.array([-0.05, 1, 0, 3]), jnp.ones(2))
     assert bool(guess.found)
     assert int(cycle.status) in (RootStatus.AT_REST, RootStatus.STALLED)
 
 
 @pytest.mark.usefixtures("user_errors")
 def test_messages():
-    p = HopfParams([0.5], [3.0])
+    p = VALUES
     with pytest.raises(ValueError, match="`y0` must have at least two entries"):
         limit_cycle(rk4(lambda t, y, p: y), p, jnp.ones(1), 1.0, steps=10)
     with pytest.raises(ValueError, match="`steps` must be at least 1"):
         limit_cycle(UNIT, p, FIRST, 1.0, steps=0)
     with pytest.raises(TypeError, match="`y0` must hold real floating-point"):
-        limit_cycle(UNIT, p, jnp.ones((2, 1), int), 1.0, steps=10)
+        limit_cycle(UNIT, p, jnp.ones(2, int), 1.0, steps=10)
     with pytest.raises(ValueError, match="`entry` must be one of the 2 entries"):
         cycle_guess(UNIT, p, FIRST, 0.1, 10, entry=2)
