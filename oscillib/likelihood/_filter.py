@@ -7,12 +7,11 @@ import jax
 import jax.numpy as jnp
 import numpy as np
 from jax import lax
-from jax.scipy.linalg import solve_triangular
 from jaxtyping import Array, Bool, Float
 
 from .._validate import as_float, check_count, check_same_dtype, check_shape
 from ..integrate import NoisyAdvance, NoisyStep, segmented_scan
-from ._gaussian import Gaussian, Method, by_columns, check_belief, check_method, predict
+from ._gaussian import Gaussian, Method, by_columns, check_belief, check_method, predict, whitener
 
 
 class Filtered(NamedTuple):
@@ -222,17 +221,13 @@ def _update(belief: Gaussian, reading: Reading, value: Array, seen: Array, noise
     both = seen[:, None] & seen[None, :]
     variance = jnp.where(seen, noise**2, 1)
     total = jnp.where(both, reading.covariance, 0) + jnp.diag(variance)
-    inverse, log_determinant = _inverse_and_log_determinant(total)
-    residual = solve_triangular(jnp.linalg.cholesky(total), innovation, lower=True)
-    gain = rows.T @ inverse
+    white = whitener(total)
+    residual = white @ innovation
+    gain = (white @ rows).T @ white
     count = jnp.sum(seen).astype(mean.dtype)
     contribution = (
-        -(
-            innovation @ inverse @ innovation
-            + log_determinant
-            + count * jnp.log(2 * jnp.pi).astype(mean.dtype)
-        )
-        / 2
+        jnp.sum(jnp.log(jnp.diag(white)))
+        - (jnp.sum(residual**2) + count * jnp.log(2 * jnp.pi).astype(mean.dtype)) / 2
     )
     # Joseph form (I - KH) P (I - KH)' + K R K', by products with the few rows of H.
     once = covariance - gain @ rows
@@ -241,18 +236,3 @@ def _update(belief: Gaussian, reading: Reading, value: Array, seen: Array, noise
     twice = once - seen_rows.T @ gain.T + (gain * variance[None]) @ gain.T
     mean = mean + (gain @ innovation).reshape(mean.shape)
     return Gaussian(mean, (twice + twice.T) / 2), contribution, residual
-
-
-@jax.custom_jvp
-def _inverse_and_log_determinant(matrix: Array) -> tuple[Array, Array]:
-    factor = jnp.linalg.cholesky(matrix)
-    inverse = solve_triangular(factor, jnp.eye(matrix.shape[0], dtype=matrix.dtype), lower=True)
-    return inverse.T @ inverse, 2 * jnp.sum(jnp.log(jnp.diag(factor)))
-
-
-@_inverse_and_log_determinant.defjvp
-def _(primals, tangents):
-    # Two products, where differentiating the factorisation would take several triangular solves.
-    inverse, log_determinant = _inverse_and_log_determinant(*primals)
-    (change,) = tangents
-    return (inverse, log_determinant), (-inverse @ change @ inverse, jnp.sum(inverse * change))

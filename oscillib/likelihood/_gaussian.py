@@ -5,7 +5,7 @@ from typing import Any, Literal, NamedTuple, TypeAlias
 
 import jax
 import jax.numpy as jnp
-from jaxtyping import Array, Float
+from jaxtyping import Array, Float, Inexact
 
 from .._validate import as_float, check_same_dtype, check_shape
 from ..integrate import NoisyAdvance, covariance_factor
@@ -156,3 +156,24 @@ def _cubature(f: Callable[[Array], Array], belief: Gaussian):
         return slope @ jax.scipy.linalg.solve_triangular(factor, columns, lower=True)
 
     return Gaussian(image, spread.T @ spread), push
+
+
+@jax.custom_jvp
+def whitener(covariance: Inexact[Array, "size size"]) -> Inexact[Array, "size size"]:
+    """Return the lower triangular `W` with `W covariance W* = 1`: the inverse Cholesky factor.
+
+    NaN unless the covariance is positive definite. With `W` alone, inverse `W* W` and
+    log-determinant `-2 sum log diag W` follow by products; its derivative below is products too,
+    where differentiating a factorisation takes several triangular solves.
+    """
+    factor = jnp.linalg.cholesky(covariance)
+    eye = jnp.eye(covariance.shape[0], dtype=covariance.dtype)
+    return jax.scipy.linalg.solve_triangular(factor, eye, lower=True)
+
+
+@whitener.defjvp
+def _(primals, tangents):
+    white, (change,) = whitener(*primals), tangents
+    inner = jnp.tril(white @ change @ white.conj().T)
+    half = inner - jnp.diag(jnp.diag(inner)) / 2
+    return white, -half @ white

@@ -9,7 +9,7 @@ from jaxtyping import Array, Float
 
 from .._validate import check_floating, check_shape
 from ..integrate import NoisyStep, Windows
-from ._gaussian import Gaussian, predict
+from ._gaussian import Gaussian, predict, whitener
 
 
 class JointNoise(NamedTuple):
@@ -100,8 +100,7 @@ def joint_noise(
 
 
 def _invert(covariance: Array) -> JointNoise:
-    factor = jnp.linalg.cholesky(covariance)
-    eye = jnp.eye(covariance.shape[0], dtype=covariance.dtype)
-    inverse = jax.scipy.linalg.solve_triangular(factor, eye, lower=True)
-    log_volume = jnp.sum(jnp.log(jnp.diag(factor) * jnp.sqrt(2 * jnp.pi).astype(factor.dtype)))
-    return JointNoise(inverse.T @ inverse, covariance, log_volume)
+    white = whitener(covariance)
+    root = jnp.sqrt(2 * jnp.pi).astype(white.dtype)
+    log_volume = jnp.sum(jnp.log(root / jnp.diag(white)))
+    return JointNoise(white.T @ white, covariance, log_volume)

@@ -2,12 +2,12 @@
 
 from typing import NamedTuple
 
-import jax
 import jax.numpy as jnp
 from jax import lax
 from jaxtyping import Array, Bool, Float
 
 from ._filter import Filtered
+from ._gaussian import whitener
 
 
 class Smoothed(NamedTuple):
@@ -92,5 +92,5 @@ def _gain(cross: Array, predicted: Array) -> Array:
     scale = jnp.where(known, 1, 1 / jnp.sqrt(jnp.where(known, 1, diagonal)))
     # In units of the standard deviations, entries of very different size stay well conditioned.
     scaled = predicted * scale[:, None] * scale[None] + jnp.diag(jnp.where(known, 1, 0 * scale))
-    factor = jax.scipy.linalg.cho_factor(scaled, lower=True)
-    return (scale[:, None] * jax.scipy.linalg.cho_solve(factor, scale[:, None] * cross)).T
+    white = whitener(scaled) * scale[None]
+    return (white @ cross).T @ white

@@ -9,6 +9,7 @@ from jaxtyping import Array, Bool, Float, Int
 
 from .._validate import as_float, check_count, check_same_dtype, check_shape
 from ..integrate import linear_transition
+from ._gaussian import whitener
 
 
 class CrossSpectrum(NamedTuple):
@@ -256,8 +257,7 @@ def whittle(model: CrossSpectrum, sample: SampleSpectrum) -> Float[Array, ""]:
     check_same_dtype("sample.spectrum.real", sample.spectrum.real, "model.real", model.real)
     expected = jax.lax.complex(model.real, model.imag)
     seen = jax.lax.complex(sample.spectrum.real, sample.spectrum.imag)
-    factor = jnp.linalg.cholesky(expected)
-    diagonal = jnp.diagonal(factor, axis1=1, axis2=2).real
-    ratio = jnp.linalg.solve(expected, seen)
-    trace = jnp.sum(jnp.diagonal(ratio, axis1=1, axis2=2).real)
-    return sample.count.astype(trace.dtype) * (2 * jnp.sum(jnp.log(diagonal)) + trace)
+    white = jax.vmap(whitener)(expected)
+    diagonal = jnp.diagonal(white, axis1=1, axis2=2).real
+    trace = jnp.sum((white.conj() * (white @ seen)).real)
+    return sample.count.astype(trace.dtype) * (trace - 2 * jnp.sum(jnp.log(diagonal)))

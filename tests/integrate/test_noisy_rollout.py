@@ -161,10 +161,11 @@ def test_diffrax_solver_meets_the_same_law():
 
     def one(key):
         path = diffrax.VirtualBrownianTree(0.0, t, 1e-3, (2,), key)
-        return diffrax.diffeqsolve(
+        solution = diffrax.diffeqsolve(
             diffrax_terms(FIELD, path), diffrax.Heun(), 0.0, t, 0.02, jnp.zeros((2, 1)),
             args=params,
-        ).ys[0, :, 0]  # fmt: skip
+        )  # fmt: skip
+        return jnp.asarray(solution.ys)[0, :, 0]
 
     ends = jax.jit(jax.vmap(one))(jax.random.split(jax.random.key(2), 4000))
     expected = s**2 * (1 - np.exp(2 * a * t)) / (-2 * a)

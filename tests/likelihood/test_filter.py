@@ -1,5 +1,7 @@
 """The Gaussian filter: exact for linear networks, safe, differentiable, blind to masked entries."""
 
+from typing import Any
+
 import jax
 import jax.numpy as jnp
 import numpy as np
@@ -107,7 +109,7 @@ def test_equals_statsmodels(step, pair, missing):
     model["selection"] = np.eye(4)
     model.initialize_known(np.zeros(4), np.asarray(start.covariance))
     model.ssm.tolerance = 0  # else its filter freezes once it has nearly converged
-    theirs = model.ssm.smooth()
+    theirs: Any = model.ssm.smooth()
     ours = gaussian_filter(
         step, linear_readout, params, jnp.asarray(values), mask, h=h, start=start
     )

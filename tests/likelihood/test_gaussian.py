@@ -6,7 +6,7 @@ import numpy as np
 
 from oscillib.fields import HopfNetwork, HopfParams
 from oscillib.likelihood import Gaussian, wide_start
-from oscillib.likelihood._gaussian import jacobian, local_blocks, push_blocks, transport
+from oscillib.likelihood._gaussian import jacobian, local_blocks, push_blocks, transport, whitener
 
 
 FLOW = HopfNetwork().saturation_flow(
@@ -43,3 +43,17 @@ def test_both_ways_agree_on_narrow_beliefs():
 
 def test_wide_start_takes_the_precision_of_its_scale():
     assert wide_start((2, 3), jnp.float32(2.0)).covariance.dtype == jnp.float32
+
+
+def test_whitener_and_its_derivatives():
+    root = jnp.array([[2.0, 0.0, 0.0], [0.3, 1.0, 0.0], [-0.5, 0.7, 0.4]])
+    covariance, change = root @ root.T, jnp.array([[0.3, 0.1, 0.2], [0.1, -0.4, 0.0], [0.2, 0, 1]])
+    white = whitener(covariance)
+    np.testing.assert_allclose(white, jnp.linalg.inv(root), atol=1e-14)
+    along = lambda e: jax.jvp(whitener, (covariance + e * change,), (change,))
+    numeric = (along(1e-6)[0] - along(-1e-6)[0]) / 2e-6
+    np.testing.assert_allclose(along(0.0)[1], numeric, rtol=1e-7, atol=1e-9)
+    second = jax.jvp(lambda e: along(e)[1], (0.0,), (1.0,))[1]
+    numeric = (along(1e-6)[1] - along(-1e-6)[1]) / 2e-6
+    np.testing.assert_allclose(second, numeric, rtol=1e-6, atol=1e-8)
+    assert bool(jnp.all(jnp.isnan(whitener(-covariance))[-1]))
