@@ -7,11 +7,21 @@ import jax
 import jax.numpy as jnp
 import numpy as np
 from jax import lax
+from jax.ad_checkpoint import checkpoint_name
 from jaxtyping import Array, Bool, Float
 
 from .._validate import as_float, check_count, check_same_dtype, check_shape
 from ..integrate import NoisyAdvance, NoisyStep, segmented_scan
-from ._gaussian import Gaussian, Method, by_columns, check_belief, check_method, predict, whitener
+from ._gaussian import (
+    KEPT,
+    Gaussian,
+    Method,
+    check_belief,
+    check_method,
+    predict,
+    square,
+    whitener,
+)
 
 
 class Filtered(NamedTuple):
@@ -51,9 +61,9 @@ class Reading(NamedTuple):
     """One belief seen through the readout, before its sample is used."""
 
     means: Array  # (channel,)
-    rows: Array  # (channel, size): H P
+    cross: Array  # (size, channel): P H'
     covariance: Array  # (channel, channel): H P H'
-    push: Callable[[Array], Array]  # H, applied to columns
+    see: Callable[[Array], Array]  # matrix -> matrix H'
 
 
 def gaussian_filter(
@@ -148,8 +158,10 @@ def gaussian_filter(
         )  # fmt: skip
 
     xs = (values, mask, intervals.times, intervals.lengths)
-    # Reverse mode keeps one belief a sample and recomputes the rest: less to store and to read.
-    kept = jax.checkpoint(body, prevent_cse=False)
+    # Reverse mode keeps the beliefs and what the update factorised, and recomputes the rest: to
+    # store every intermediate takes longer than to compute it again.
+    policy = jax.checkpoint_policies.save_only_these_names(KEPT)
+    kept = jax.checkpoint(body, prevent_cse=False, policy=policy)
     _, outputs = segmented_scan(kept, start, xs, segment=segment)
     contributions, filtered, predicted, crosses, channel_means, channel_variances, residuals = (
         outputs
@@ -208,31 +220,37 @@ class Intervals:
 def read(readout: Callable[[Any, Any], Any], params: Any, belief: Gaussian) -> Reading:
     """See a belief through the readout, linearised at its mean."""
     means, linear = jax.linearize(lambda y: readout(y, params), belief.mean)
-    push = by_columns(linear, belief.mean.shape)
-    rows = push(belief.covariance)
-    return Reading(means, rows, push(rows.T), push)
+    see = jax.vmap(lambda v: linear(v.reshape(belief.mean.shape)))
+    cross = see(belief.covariance)
+    return Reading(means, cross, see(cross.T), see)
 
 
 def _update(belief: Gaussian, reading: Reading, value: Array, seen: Array, noise: Array):
     """Use one sample; an unseen channel has a zero row of H and an innovation of zero."""
     mean, covariance = belief
     innovation = jnp.where(seen, jnp.where(seen, value, 0) - reading.means, 0)
-    rows = jnp.where(seen[:, None], reading.rows, 0)
-    both = seen[:, None] & seen[None, :]
+    cross = jnp.where(seen[None], reading.cross, 0)
+    both = seen[:, None] & seen[None]
     variance = jnp.where(seen, noise**2, 1)
-    total = jnp.where(both, reading.covariance, 0) + jnp.diag(variance)
-    white = whitener(total)
+    # Diagonals by products: the derivative of picking them out is a slow scatter.
+    eye = jnp.eye(noise.shape[0], dtype=noise.dtype)
+    white = whitener(jnp.where(both, reading.covariance, 0) + eye * variance[None])
     residual = white @ innovation
-    gain = (white @ rows).T @ white
+    scaled = checkpoint_name(cross @ white.T, KEPT)
     count = jnp.sum(seen).astype(mean.dtype)
     contribution = (
-        jnp.sum(jnp.log(jnp.diag(white)))
+        jnp.sum(jnp.log(jnp.sum(eye * white, axis=0)))
         - (jnp.sum(residual**2) + count * jnp.log(2 * jnp.pi).astype(mean.dtype)) / 2
     )
-    # Joseph form (I - KH) P (I - KH)' + K R K', by products with the few rows of H.
-    once = covariance - gain @ rows
-    seen_rows = jnp.where(seen[:, None], reading.push(once.T), 0)
+    mean = mean + (scaled @ residual).reshape(mean.shape)
+    # Joseph form (I - KH) P (I - KH)' + K R K' stays positive where P - P H' S^-1 H P does not.
+    # The two are equal, so derivatives are taken of the second, which is cheaper.
+    difference = covariance - square(scaled)
+    gain = scaled @ white
+    once = covariance - gain @ cross.T
     # K is zero in unseen channels, whatever stands in R there.
-    twice = once - seen_rows.T @ gain.T + (gain * variance[None]) @ gain.T
-    mean = mean + (gain @ innovation).reshape(mean.shape)
-    return Gaussian(mean, (twice + twice.T) / 2), contribution, residual
+    again = gain * variance[None] - jnp.where(seen[None], reading.see(once), 0)
+    joseph = once + again @ gain.T
+    correction = lax.stop_gradient((joseph + joseph.T) / 2 - difference)
+    covariance = checkpoint_name(difference + correction, KEPT)
+    return Gaussian(mean, covariance), contribution, residual

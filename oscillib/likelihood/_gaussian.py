@@ -5,11 +5,16 @@ from typing import Any, Literal, NamedTuple, TypeAlias
 
 import jax
 import jax.numpy as jnp
+from jax import lax
+from jax.ad_checkpoint import checkpoint_name
 from jaxtyping import Array, Float, Inexact
 
 from .._validate import as_float, check_same_dtype, check_shape
 from ..integrate import NoisyAdvance, covariance_factor
 
+
+# Label of what the filter keeps for reverse mode.
+KEPT = "kept by the filter"
 
 Method: TypeAlias = Literal["extended", "cubature"]
 # push(columns) -> columns: the matrix of the linearised map, applied to each column
@@ -69,11 +74,6 @@ def check_method(method: Any) -> None:
         raise ValueError(f"`method` must be 'extended' or 'cubature'; got {method!r}.")
 
 
-def by_columns(linear: Callable[[Array], Array], shape: tuple[int, ...]) -> Push:
-    """Let a linear map of states act on each column of a `(size, k)` matrix."""
-    return jax.vmap(lambda v: linear(v.reshape(shape)).reshape(-1), in_axes=1, out_axes=1)
-
-
 def jacobian(f: Callable[[Array], Array], y: Array) -> Float[Array, "image size"]:
     """Return the Jacobian of a map, on flattened states."""
     basis = jnp.eye(y.size, dtype=y.dtype).reshape(-1, *y.shape)
@@ -81,28 +81,68 @@ def jacobian(f: Callable[[Array], Array], y: Array) -> Float[Array, "image size"
     return image.reshape(-1, y.size)
 
 
-def local_blocks(f: Callable[[Array], Array], y: Array) -> tuple[Array, list[Array]]:
+def local_blocks(f: Callable[[Array], Array], y: Array) -> tuple[Array, list[list[Array]]]:
     """Return the image and the Jacobian of a map that acts on every node by itself.
 
-    One derivative for each component, taken at all nodes at once, holds the whole Jacobian; block
-    c, `(component, node)`, is the derivative by component c. Its cost, and that of differentiating
-    it, do not grow with the square of the network.
+    One derivative for each component, taken at all nodes at once, holds the whole Jacobian: entry
+    `[a][c]`, shape `(node,)`, is the derivative of component a by component c. Its cost, and that
+    of differentiating it, do not grow with the square of the network.
     """
     nodes = y.shape[-1]
     size = y.size // nodes
     basis = jnp.eye(size, dtype=y.dtype)
     tangents = jnp.broadcast_to(basis[:, :, None], (size, size, nodes)).reshape(size, *y.shape)
     image, linear = jax.linearize(f, y)
-    return image, [linear(v).reshape(size, nodes) for v in tangents]
+    columns = [linear(v).reshape(size, nodes) for v in tangents]
+    # The compiler would else work these few numbers out anew for every entry that they multiply.
+    columns = lax.optimization_barrier(columns)
+    return image, [[column[a] for column in columns] for a in range(size)]
 
 
-def push_blocks(blocks: list[Array], columns: Array) -> Array:
-    """Apply the Jacobian that `local_blocks` found to each column of a `(size, k)` matrix."""
-    parts = columns.reshape(*blocks[0].shape, -1)
-    image = jnp.zeros_like(parts)
-    for block, part in zip(blocks, parts, strict=True):
-        image = image + block[:, :, None] * part[None]
-    return image.reshape(columns.shape)
+def push_blocks(blocks: list[list[Array]], matrix: Array) -> Array:
+    """Return `J matrix` for the Jacobian that `local_blocks` found."""
+    parts = jnp.split(matrix, len(blocks))
+    rows = [[d[:, None] * x for d, x in zip(row, parts, strict=True)] for row in blocks]
+    return jnp.concatenate([sum(row[1:], row[0]) for row in rows])
+
+
+def pull_blocks(blocks: list[list[Array]], matrix: Array) -> Array:
+    """Return `matrix J'`; written out, because a transpose on either side costs more than this."""
+    parts = jnp.split(matrix, len(blocks), axis=1)
+    columns = [[d[None] * x for d, x in zip(row, parts, strict=True)] for row in blocks]
+    return jnp.concatenate([sum(column[1:], column[0]) for column in columns], axis=1)
+
+
+@jax.custom_jvp
+def sandwich_blocks(blocks: list[list[Array]], covariance: Array) -> Array:
+    """Return `J covariance J'` for the Jacobian that `local_blocks` found."""
+    return pull_blocks(blocks, push_blocks(blocks, covariance))
+
+
+@sandwich_blocks.defjvp
+def _(primals, tangents):
+    # Both factors of a symmetric product change alike: half the work of differentiating each.
+    (blocks, covariance), (changes, change) = primals, tangents
+    pulled = pull_blocks(blocks, covariance)
+    half = push_blocks(changes, pulled)
+    return push_blocks(blocks, pulled), half + half.T + sandwich_blocks(blocks, change)
+
+
+@jax.custom_jvp
+def sandwich(matrix: Array, covariance: Array) -> Array:
+    """Return `matrix covariance matrix'` of a symmetric covariance."""
+    return matrix @ covariance @ matrix.T
+
+
+@sandwich.defjvp
+def _(primals, tangents):
+    (matrix, covariance), (move, change) = primals, tangents
+    # Products with a transposed matrix are slow, so it is transposed once and for all; the last
+    # term is written so that reverse mode meets no other kind.
+    transposed = lax.optimization_barrier(matrix.T)
+    pulled = covariance @ transposed
+    half = move @ pulled
+    return matrix @ pulled, half + half.T + transposed.T @ (change @ matrix.T)
 
 
 def transport(f: Callable[[Array], Array], belief: Gaussian, method: Method, *, local: bool):
@@ -111,11 +151,11 @@ def transport(f: Callable[[Array], Array], belief: Gaussian, method: Method, *, 
         return _cubature(f, belief)
     if local:
         image, blocks = local_blocks(f, belief.mean)
-        push: Push = lambda columns: push_blocks(blocks, columns)
-    else:
-        image, matrix = f(belief.mean), jacobian(f, belief.mean)
-        push = lambda columns: matrix @ columns
-    return Gaussian(image, push(push(belief.covariance).T)), push
+        spread = sandwich_blocks(blocks, belief.covariance)
+        return Gaussian(image, spread), lambda columns: push_blocks(blocks, columns)
+    matrix = jacobian(f, belief.mean)
+    spread = sandwich(matrix, belief.covariance)
+    return Gaussian(f(belief.mean), spread), lambda columns: matrix @ columns
 
 
 def predict(advance: NoisyAdvance, t: Array, belief: Gaussian, method: Method):
@@ -125,7 +165,7 @@ def predict(advance: NoisyAdvance, t: Array, belief: Gaussian, method: Method):
     if matrix is None:
         spread = middle.covariance
     else:
-        spread = matrix @ middle.covariance @ matrix.T
+        spread = sandwich(matrix, middle.covariance)
         mean = (matrix @ middle.mean.reshape(-1)).reshape(middle.mean.shape)
         middle = Gaussian(mean, spread)
     middle = Gaussian(middle.mean, spread + advance.covariance)
@@ -135,7 +175,7 @@ def predict(advance: NoisyAdvance, t: Array, belief: Gaussian, method: Method):
         columns = push_before(columns)
         return push_after(columns if matrix is None else matrix @ columns)
 
-    return Gaussian(after.mean, (after.covariance + after.covariance.T) / 2), push
+    return after, push
 
 
 def _cubature(f: Callable[[Array], Array], belief: Gaussian):
@@ -159,6 +199,19 @@ def _cubature(f: Callable[[Array], Array], belief: Gaussian):
 
 
 @jax.custom_jvp
+def square(matrix: Array) -> Array:
+    """Return `matrix matrix'`."""
+    return matrix @ matrix.T
+
+
+@square.defjvp
+def _(primals, tangents):
+    (matrix,), (move,) = primals, tangents
+    half = move @ matrix.T
+    return square(matrix), half + half.T
+
+
+@jax.custom_jvp
 def whitener(covariance: Inexact[Array, "size size"]) -> Inexact[Array, "size size"]:
     """Return the lower triangular `W` with `W covariance W* = 1`: the inverse Cholesky factor.
 
@@ -166,14 +219,20 @@ def whitener(covariance: Inexact[Array, "size size"]) -> Inexact[Array, "size si
     log-determinant `-2 sum log diag W` follow by products; its derivative below is products too,
     where differentiating a factorisation takes several triangular solves.
     """
-    factor = jnp.linalg.cholesky(covariance)
-    eye = jnp.eye(covariance.shape[0], dtype=covariance.dtype)
-    return jax.scipy.linalg.solve_triangular(factor, eye, lower=True)
+    return _inverse_factor(covariance)
 
 
 @whitener.defjvp
 def _(primals, tangents):
-    white, (change,) = whitener(*primals), tangents
-    inner = jnp.tril(white @ change @ white.conj().T)
-    half = inner - jnp.diag(jnp.diag(inner)) / 2
-    return white, -half @ white
+    # Not `whitener` itself: inside a custom rule the label of what is kept would not be seen.
+    white, (change,) = _inverse_factor(*primals), tangents
+    inner = white @ change @ white.conj().T
+    place = jnp.arange(white.shape[0])
+    weight = jnp.where(place[:, None] > place[None], 1.0, 0.0) + jnp.eye(place.size) / 2
+    return white, -(inner * weight.astype(white.dtype)) @ white
+
+
+def _inverse_factor(covariance: Array) -> Array:
+    factor = jnp.linalg.cholesky(covariance)
+    eye = jnp.eye(covariance.shape[0], dtype=covariance.dtype)
+    return checkpoint_name(jax.scipy.linalg.solve_triangular(factor, eye, lower=True), KEPT)

@@ -68,12 +68,17 @@ def stationary_covariance(
     short = 1 / jnp.where(norm > 0, norm, 1)
     propagator, covariance = linear_transition(matrix, rate, short)
 
-    def double(carry, _):
+    def double(carry):
         propagator, covariance = carry
         added = propagator @ covariance @ propagator.T
-        return (propagator @ propagator, covariance + (added + added.T) / 2), None
+        return propagator @ propagator, covariance + (added + added.T) / 2
 
-    (left, covariance), _ = lax.scan(double, (propagator, covariance), length=_DOUBLINGS)
+    def maybe(carry, _):
+        # Of a propagator below 1e-20 nothing more can be added.
+        left = jnp.max(jnp.abs(carry[0])) > 1e-20
+        return lax.cond(left, double, lambda x: x, carry), None
+
+    (left, covariance), _ = lax.scan(maybe, (propagator, covariance), length=_DOUBLINGS)
     # NaN from an overflow compares as False.
     damped = (jnp.max(jnp.abs(left)) < 0.1) & jnp.all(jnp.isfinite(covariance))
     return Stationary(jnp.where(damped, covariance, jnp.nan), damped)

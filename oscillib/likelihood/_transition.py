@@ -90,7 +90,7 @@ def _log_density(advance: NoisyAdvance, t: Array, y0: Array, y1: Array) -> Array
     if advance.local:
         undone, blocks = local_blocks(lambda y: undo(t, y), end)
         # (node, component, component); of a plane the determinant has a formula.
-        determinants = jnp.linalg.det(jnp.stack(blocks).transpose(2, 1, 0))
+        determinants = jnp.linalg.det(jnp.stack([jnp.stack(row, 1) for row in blocks], 1))
         log_volume = jnp.sum(jnp.log(jnp.abs(determinants)))
     else:
         undone = undo(t, end)

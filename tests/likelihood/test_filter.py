@@ -90,7 +90,7 @@ def test_equals_the_dense_normal_with_missing_samples_at_irregular_times(
 
 
 @pytest.mark.parametrize("missing", [False, True])
-def test_equals_statsmodels(step, pair, missing):
+def test_equals_statsmodels(filtering, pair, missing):
     import statsmodels.api as sm
 
     params, h = pair(), 0.1
@@ -110,9 +110,7 @@ def test_equals_statsmodels(step, pair, missing):
     model.initialize_known(np.zeros(4), np.asarray(start.covariance))
     model.ssm.tolerance = 0  # else its filter freezes once it has nearly converged
     theirs: Any = model.ssm.smooth()
-    ours = gaussian_filter(
-        step, linear_readout, params, jnp.asarray(values), mask, h=h, start=start
-    )
+    ours = filtering(params, jnp.asarray(values), mask, jnp.asarray(h), start)
     np.testing.assert_allclose(ours.log_likelihood, theirs.llf, rtol=1e-8)
     filtered = ours.means.reshape(60, 4).T
     np.testing.assert_allclose(filtered, theirs.filtered_state, atol=1e-9)
@@ -181,6 +179,7 @@ def test_gradient_at_zero_noise_is_finite(value_and_gradient, pair, recording):
     assert all(bool(jnp.all(jnp.isfinite(x))) for x in jax.tree.leaves(gradient))
 
 
+@pytest.mark.long
 def test_second_derivative(step):
     values = jnp.sin(jnp.arange(12.0))[:, None]
 
@@ -199,40 +198,40 @@ def test_second_derivative(step):
     np.testing.assert_allclose(along(x)[1], (ahead - behind) / 2e-5, rtol=1e-5)
 
 
-def test_methods_locality_substeps_and_segments_agree_where_they_must(pair, recording, step):
+def runner(recording, step, **options):
+    """Compile the log-likelihood, as a function of the parameters."""
     _, values, mask = recording
     start = wide_start((2, 2), 0.4)
-
-    def run(params, step=step, **options):
-        f = lambda p: gaussian_filter(
-            step, linear_readout, p, values, mask, h=0.1, start=start, **options
+    return jax.jit(
+        lambda params: (
+            gaussian_filter(
+                step, linear_readout, params, values, mask, h=0.1, start=start, **options
+            ).log_likelihood
         )
-        return jax.jit(lambda p: f(p).log_likelihood)(params)
+    )
 
+
+def test_methods_locality_and_segments_agree_where_they_must(pair, recording, step):
     linear, bent = pair(), pair(0.5)
-    exact = run(linear)
-    np.testing.assert_allclose(run(linear, method="cubature"), exact, rtol=1e-11)
-    np.testing.assert_allclose(run(linear, substeps=3), exact, rtol=1e-11)
-    np.testing.assert_allclose(run(linear, segment=7), exact, rtol=1e-12)
+    run = runner(recording, step)
+    by_points = runner(recording, step, method="cubature")
+    np.testing.assert_allclose(by_points(linear), run(linear), rtol=1e-11)
+    # They differ on a bent network, by little while beliefs are narrow.
+    assert 1e-7 < abs(by_points(bent) / run(bent) - 1) < 0.02
+    pieces = runner(recording, step, segment=7)
+    np.testing.assert_allclose(pieces(bent), run(bent), rtol=1e-12)
     whole = noisy_strang(FIELD.saturation_flow, FIELD.linear_matrix, local=False)
-    np.testing.assert_allclose(run(bent, step=whole), run(bent), rtol=1e-11)
-    # Methods differ on a bent network, by little while beliefs are narrow.
-    assert 1e-7 < abs(run(bent, method="cubature") / run(bent) - 1) < 0.02
+    np.testing.assert_allclose(runner(recording, whole)(bent), run(bent), rtol=1e-11)
 
 
-def test_any_step_of_the_users_own(pair, recording):
-    _, values, mask = recording
-    params, start = pair(0.5), wide_start((2, 2), 0.4)
-
-    def run(step, substeps):
-        return gaussian_filter(
-            step, linear_readout, params, values, mask, h=0.1, start=start, substeps=substeps
-        ).log_likelihood
-
-    exact = run(noisy_strang(FIELD.saturation_flow, FIELD.linear_matrix), 8)
-    np.testing.assert_allclose(run(split_noise(rk4(FIELD)), 8), exact, rtol=1e-3)
+def test_substeps_and_any_step_of_the_users_own(pair, recording, step):
+    linear, bent = pair(), pair(0.5)
+    fine = runner(recording, step, substeps=8)
+    np.testing.assert_allclose(fine(linear), runner(recording, step)(linear), rtol=1e-11)
+    other = runner(recording, split_noise(rk4(FIELD)), substeps=8)
+    np.testing.assert_allclose(other(bent), fine(bent), rtol=1e-3)
     # Euler-Maruyama at the sampling interval describes another system.
-    assert run(euler_maruyama(FIELD), 1) < exact - 1
+    assert runner(recording, euler_maruyama(FIELD))(bent) < fine(bent) - 1
 
 
 def test_vmap_over_recordings(filtering, pair, recording):
@@ -261,12 +260,10 @@ def test_single_precision_with_hardly_any_reading_noise_stays_positive(step, pai
     assert np.all(least > -1e-9)
 
 
-def test_a_blow_up_is_no_success(step, pair, recording):
-    _, values, mask = recording
-    out = gaussian_filter(
-        step, linear_readout, pair(-5.0), values, mask, h=0.1, start=wide_start((2, 2), 3.0)
-    )
-    assert not bool(out.finite)
+def test_a_blow_up_is_no_success(filtering, pair, recording):
+    times, values, mask = recording
+    h = jnp.asarray(np.diff(times))
+    assert not bool(filtering(pair(-5.0), values, mask, h, wide_start((2, 2), 3.0)).finite)
 
 
 @pytest.mark.usefixtures("user_errors")

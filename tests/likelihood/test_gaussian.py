@@ -6,7 +6,14 @@ import numpy as np
 
 from oscillib.fields import HopfNetwork, HopfParams
 from oscillib.likelihood import Gaussian, wide_start
-from oscillib.likelihood._gaussian import jacobian, local_blocks, push_blocks, transport, whitener
+from oscillib.likelihood._gaussian import (
+    jacobian,
+    local_blocks,
+    pull_blocks,
+    push_blocks,
+    transport,
+    whitener,
+)
 
 
 FLOW = HopfNetwork().saturation_flow(
@@ -16,10 +23,12 @@ Y = jnp.array([[0.5, -0.3], [0.2, 0.9]])
 
 
 def test_blocks_are_the_whole_jacobian_of_a_local_map():
-    image, blocks = local_blocks(FLOW, Y)
+    image, blocks = jax.jit(lambda y: local_blocks(FLOW, y))(Y)
+    dense = jax.jit(lambda y: jacobian(FLOW, y))(Y)
     np.testing.assert_allclose(image, FLOW(Y), atol=1e-15)
-    np.testing.assert_allclose(push_blocks(blocks, jnp.eye(4)), jacobian(FLOW, Y), atol=1e-15)
-    np.testing.assert_allclose(jacobian(FLOW, Y), jax.jacrev(FLOW)(Y).reshape(4, 4), atol=1e-14)
+    np.testing.assert_allclose(push_blocks(blocks, jnp.eye(4)), dense, atol=1e-15)
+    np.testing.assert_allclose(pull_blocks(blocks, jnp.eye(4)), dense.T, atol=1e-15)
+    np.testing.assert_allclose(dense, jax.jit(jax.jacrev(FLOW))(Y).reshape(4, 4), atol=1e-14)
 
 
 def test_cubature_carries_the_mean_of_a_cubic_map_exactly():
@@ -34,11 +43,17 @@ def test_both_ways_agree_on_narrow_beliefs():
         [[2.0, 0.3, 0.1, 0.0], [0.3, 1.0, 0.0, 0.2], [0.1, 0.0, 1.5, 0.4], [0.0, 0.2, 0.4, 3.0]]
     )
     belief = Gaussian(Y, spread)
-    by_jacobian, push = transport(FLOW, belief, "extended", local=True)
-    by_points, regression = transport(FLOW, belief, "cubature", local=True)
+
+    @jax.jit
+    def carried(belief):
+        by_jacobian, push = transport(FLOW, belief, "extended", local=True)
+        by_points, regression = transport(FLOW, belief, "cubature", local=True)
+        return by_jacobian, push(spread), by_points, regression(spread)
+
+    by_jacobian, pushed, by_points, regressed = carried(belief)
     np.testing.assert_allclose(by_points.mean, by_jacobian.mean, atol=1e-5)
     np.testing.assert_allclose(by_points.covariance, by_jacobian.covariance, atol=1e-10)
-    np.testing.assert_allclose(regression(spread), push(spread), atol=1e-10)
+    np.testing.assert_allclose(regressed, pushed, atol=1e-10)
 
 
 def test_wide_start_takes_the_precision_of_its_scale():
