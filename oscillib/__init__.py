@@ -3,6 +3,8 @@
 from importlib.metadata import version as _version
 
 from . import (
+    analysis as analysis,
+    demo as demo,
     evaluate as evaluate,
     fields as fields,
     fitting as fitting,
