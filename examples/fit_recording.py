@@ -18,12 +18,11 @@ import numpy as np
 import optax
 from jax.flatten_util import ravel_pytree
 from rhythm_model import (
+    Prior,
     amplitude,
-    constraints,
     initial_params,
     noisy_readout,
     noisy_step,
-    prior_loss,
     window_step,
 )
 from tqdm import tqdm
@@ -46,7 +45,8 @@ class Data(NamedTuple):
     grid: recordings.Recording
     scaled: recordings.Recording
     scaling: recordings.Scaling
-    detrended: recordings.Recording  # training part, same scale, for start values and windows
+    trend: recordings.Scaling  # a parabola, for start values and windows only
+    detrended: recordings.Recording  # training part, same scale, no trend
     training: int  # samples in the training part
     interval: float  # time units of the recording
 
@@ -65,8 +65,9 @@ def main(argv: list[str] | None = None) -> dict:
     data = prepare(args.csv, args.holdout, args.horizon, args.seed)
     clock = start_values(data)
     initial = initial_params(clock.start)
-    params, windows = fit_windows(data, clock, initial, rounds=args.rounds)
-    params, fit = fit_noise(data, clock, params, initial, rounds=args.rounds)
+    prior = Prior(initial)
+    params, windows = fit_windows(data, clock, initial, prior, rounds=args.rounds)
+    params, fit = fit_noise(data, clock, params, prior, max_steps=2 * args.rounds)
     forecast = forecast_held_out(data, clock, params, args.horizon)
     report = {
         "input": describe_input(data),
@@ -109,22 +110,25 @@ def prepare(csv: Path | None, holdout: float, horizon: int | None, seed: int) ->
     # For forecasts only mean and scale are taken out: a slow trend is left to the background of the
     # noisy fit, which, unlike an extrapolated polynomial, knows how unsure it is.
     scaling = recordings.fit_scaling(known, degree=0)
+    trend = recordings.fit_scaling(known, degree=2)
     return Data(
         source=str(csv) if csv else f"built-in tray, seed {seed}",
         grid=grid,
         scaled=recordings.scale(grid, scaling),
         scaling=scaling,
-        detrended=detrend(known, scaling),
+        trend=trend,
+        detrended=detrend(known, trend, scaling),
         training=training,
         interval=float(grid.times[1] - grid.times[0]),
     )
 
 
-def detrend(known: recordings.Recording, scaling: recordings.Scaling) -> recordings.Recording:
-    """Take a parabola out of every channel, and divide as `scaling` does."""
-    bent = recordings.fit_scaling(known, degree=2)
-    flat = recordings.scale(known, bent)
-    values = flat.values * (bent.spread / scaling.spread)[None]
+def detrend(
+    known: recordings.Recording, trend: recordings.Scaling, scaling: recordings.Scaling
+) -> recordings.Recording:
+    """Take the trend out of every channel, and divide as `scaling` does."""
+    flat = recordings.scale(known, trend)
+    values = flat.values * (trend.spread / scaling.spread)
     return recordings.recording(
         flat.times, jnp.where(flat.mask, values, jnp.nan), channels=flat.channels
     )
@@ -149,7 +153,9 @@ def start_values(data: Data) -> Clock:
 # Windows ------------------------------------------------------------------------------------------
 
 
-def fit_windows(data: Data, clock: Clock, initial: Any, *, rounds: int) -> tuple[Any, dict]:
+def fit_windows(
+    data: Data, clock: Clock, initial: Any, prior: Prior, *, rounds: int
+) -> tuple[Any, dict]:
     """Fit the noise-free rhythm in windows that grow while the weight on their gaps rises."""
     known, start = data.detrended, clock.start
     times = clock.interval * jnp.arange(data.training).astype(known.times.dtype)
@@ -163,12 +169,12 @@ def fit_windows(data: Data, clock: Clock, initial: Any, *, rounds: int) -> tuple
     phase = start.frequency[None] * times[:, None] + start.phase[None]
     states = start.amplitude[None, None] * jnp.stack([jnp.cos(phase), jnp.sin(phase)], axis=1)
 
-    which = constraints(initial)
+    which = prior.constraints
     free = unconstrain(initial, which)
     progress = tqdm(total=rounds * len(lengths), desc="windows", unit="round")
     for stage, length in enumerate(lengths):
         windows = integrate.cut(times, length)
-        loss = window_loss(known, windows, which, initial)
+        loss = window_loss(known, windows, prior, initial)
         variables = (free, states[windows.index[:, 0]])
         optimiser = optax.adam(optax.cosine_decay_schedule(0.02, 10 * rounds, alpha=0.05))
         run = ten_steps(loss, optimiser)
@@ -195,20 +201,20 @@ def fit_windows(data: Data, clock: Clock, initial: Any, *, rounds: int) -> tuple
     return params, {"report": report, "read": read, "joints": joints}
 
 
-def window_loss(known: Any, windows: Any, which: Any, initial: Any) -> Any:
+def window_loss(known: Any, windows: Any, prior: Prior, initial: Any) -> Any:
     values = integrate.gather(known.values, windows)
     mask = integrate.gather(known.mask, windows) & windows.owned[..., None]
     count = jnp.sum(mask)
 
     def loss(variables, weight):
         free, starts = variables
-        params = constrain(free, which, initial)
+        params = constrain(free, prior.constraints, initial)
         rolled = integrate.roll_windows(window_step, params.dynamics.rhythm, starts, windows)
         read = jax.vmap(jax.vmap(waveform_readout, in_axes=(0, None)), in_axes=(0, None))
         predicted = read(rolled.states, params.readout)
         misfit = losses.reconstruction(predicted, values, mask, scale=initial.reading_noise)
         gaps = losses.continuity(rolled.gaps, weight=weight)
-        return (misfit + gaps + prior_loss(params, initial)) / count
+        return (misfit + gaps + prior.loss(params)) / count
 
     return loss
 
@@ -233,79 +239,56 @@ def ten_steps(loss: Any, optimiser: Any) -> Any:
 # Noise --------------------------------------------------------------------------------------------
 
 
-def filter_loss(data: Data, clock: Clock, initial: Any) -> Any:
-    known = recordings.take(data.scaled, 0, data.training)
-
-    def loss(params):
-        filtered = likelihood.gaussian_filter(
-            noisy_step, noisy_readout, params, known.values, known.mask,
-            h=clock.interval, start=filter_start(data), segment=16,
-        )  # fmt: skip
-        return -filtered.log_likelihood + prior_loss(params, initial)
-
-    return loss
-
-
 def filter_start(data: Data) -> likelihood.Gaussian:
     return likelihood.wide_start((2, 2 * data.scaled.values.shape[1]), 2.0)
 
 
 def fit_noise(
-    data: Data, clock: Clock, params: Any, initial: Any, *, rounds: int
+    data: Data, clock: Clock, params: Any, prior: Prior, *, max_steps: int
 ) -> tuple[Any, dict]:
-    """Maximise the filter's likelihood: what the windows left over is noise of some kind."""
-    which = constraints(params)
-    loss = filter_loss(data, clock, initial)
-    flat, unravel = ravel_pytree(unconstrain(params, which))
+    """Maximise the filter's likelihood by Fisher scoring: what the windows left over is noise."""
+    known, which = recordings.take(data.scaled, 0, data.training), prior.constraints
+    given = {"h": clock.interval, "start": filter_start(data)}
 
-    def flat_loss(x):
-        return loss(constrain(unravel(x), which, params))
+    def filtered(params):
+        return likelihood.gaussian_filter(
+            noisy_step, noisy_readout, params, known.values, known.mask, segment=16, **given
+        )
 
-    optimiser = optax.lbfgs()
-    value_and_grad = optax.value_and_grad_from_state(flat_loss)
+    def loss(params):
+        return -filtered(params).log_likelihood + prior.loss(params)
+
+    def information(params):
+        seen = likelihood.filter_information(
+            noisy_step, noisy_readout, params, which, known.values, known.mask, **given
+        )
+        return seen + prior.information
 
     @jax.jit
-    def step(x, memory):
-        value, slope = value_and_grad(x, state=memory)
-        updates, memory = optimiser.update(
-            slope, memory, x, value=value, grad=slope, value_fn=flat_loss
-        )
-        return optax.apply_updates(x, updates), memory, value, jnp.max(jnp.abs(slope))
+    def step(state):
+        return fitting.refine_step(loss, state, which, curvature=information, tolerance=0.05)
 
-    memory = optimiser.init(flat)
-    progress = tqdm(range(rounds * 8), desc="noise", unit="step")
-    best, best_value = flat, np.inf
+    state = fitting.refine_init(loss, params, which)
+    progress = tqdm(range(max_steps), desc="noise", unit="step")
     for _ in progress:
-        previous = flat
-        flat, memory, value, slope = step(flat, memory)
-        if np.isfinite(value) and value < best_value:
-            best, best_value = previous, float(value)
-        progress.set_postfix(loss=f"{value:.2f}", slope=f"{slope:.3f}")
-        if slope < 1e-2:
+        state = step(state)
+        off = float(jnp.sqrt(state.decrement))
+        progress.set_postfix(loss=f"{state.loss:.2f}", standard_errors_off=f"{off:.3f}")
+        if state.status != fitting.Status.RUNNING:
             break
     progress.close()
-    params = constrain(unravel(best), which, params)
+    params = state.params
     uncertainty = jax.jit(
-        lambda p, x: fitting.laplace(loss, p, which, curvature=hessian(flat_loss, x))
-    )(params, best)
+        lambda p, matrix: fitting.laplace(loss, p, which, curvature=matrix, widths=prior.widths)
+    )(params, state.curvature)
     report = {
-        "log_likelihood": number(-loss(params) + prior_loss(params, initial)),
-        "largest_slope": number(slope),
-        "finite": bool(np.isfinite(best_value)),
-        "distance": number(uncertainty.distance),
+        "status": fitting.describe(state.status),
+        "steps": int(state.steps),
+        "log_likelihood": number(prior.loss(params) - state.loss),
+        "standard_errors_off": number(jnp.sqrt(state.decrement)),
         "weak_directions": list(fitting.describe_directions(uncertainty.directions, params, which)),
     }
     return params, {"report": report, "uncertainty": uncertainty, "which": which}
-
-
-def hessian(loss: Any, x: Any) -> Any:
-    """Differentiate the gradient a few directions at a time: all at once would fill the memory."""
-
-    def column(direction):
-        return jax.jvp(jax.grad(loss), (x,), (direction,))[1]
-
-    matrix = jax.lax.map(column, jnp.eye(x.size), batch_size=4)
-    return (matrix + matrix.T) / 2
 
 
 # Forecasts ----------------------------------------------------------------------------------------
@@ -498,15 +481,17 @@ def draw(path: Path, data: Data, windows: dict, forecast: dict) -> None:
     def back(values, times):
         return recordings.unscale(values, times, data.scaling)
 
+    mean, band = forecast["means"], forecast["band"]
+    # The windows fitted what is left without the parabola; it is put back for the picture.
+    bent = windows["read"] * (data.scaling.spread / data.trend.spread)
+    fitted = recordings.unscale(bent, known, data.trend)
     plot_fit(
         path,
         data.grid,
-        fitted=(known, back(windows["read"], known)),
+        fitted=(known, fitted),
         joints=windows["joints"],
-        forecast=(ahead, *(
-            back(forecast["means"] + sign * forecast["band"], ahead) for sign in (0, -1, 1)
-        )),
-    )  # fmt: skip
+        forecast=(ahead, back(mean, ahead), back(mean - band, ahead), back(mean + band, ahead)),
+    )
 
 
 if __name__ == "__main__":

@@ -10,6 +10,7 @@ from typing import Any
 import equinox as eqx
 import jax
 import jax.numpy as jnp
+from jax.flatten_util import ravel_pytree
 from jax.scipy.stats import norm
 from jaxtyping import Array, Float
 
@@ -17,7 +18,7 @@ from oscillib.fields import HopfNetwork, HopfParams
 from oscillib.integrate import NoisyParams, noisy_strang, strang
 from oscillib.likelihood import StateSpaceParams
 from oscillib.observe import WaveformParams, waveform_readout
-from oscillib.parameters import Fixed, Free, OffDiagonal, Positive
+from oscillib.parameters import Fixed, Free, OffDiagonal, Positive, unconstrain
 
 
 FIELD = HopfNetwork()
@@ -86,29 +87,50 @@ def constraints(params: StateSpaceParams) -> StateSpaceParams:
     return jax.tree.unflatten(jax.tree.structure(params), leaves)
 
 
-def prior_loss(params: StateSpaceParams, start: StateSpaceParams) -> Float[Array, ""]:
-    """Return the negative log of a wide prior, centred on the start values.
+def prior_widths(free: Any) -> Any:
+    """Return the standard deviation of the prior of every unconstrained leaf, about its start.
 
-    Coupling and overtones are shrunk towards none: an unshrunk coupling matrix overfits short
-    recordings. Frequencies stay within a few tenths of the spectrum's peaks. Levels of noise and
-    saturation may be off by a factor of seven at one sigma.
+    Rates are in units of the median rhythm's angular frequency. Coupling and overtones are shrunk
+    towards none: an unshrunk coupling matrix overfits short recordings. Frequencies stay within a
+    few tenths of the spectrum's peaks. Levels of noise and saturation, on a logarithmic scale, may
+    be off by a factor of seven.
     """
-    rhythm, readout = params.dynamics.rhythm, params.readout
-    frequency = jnp.mean(start.dynamics.rhythm.frequency)
-    shrunk = jnp.sum((rhythm.coupling / (0.02 * frequency)) ** 2)
-    for overtone in (readout.cosine, readout.sine, readout.level):
-        shrunk = shrunk + jnp.sum((overtone / 0.3) ** 2)
-    frequencies = jnp.log(rhythm.frequency) - jnp.log(start.dynamics.rhythm.frequency)
-    shrunk = shrunk + jnp.sum((frequencies / 0.1) ** 2)
-    wide = [
-        (rhythm.saturation, start.dynamics.rhythm.saturation),
-        (params.dynamics.noise, start.dynamics.noise),
-        (params.dynamics.background_rate, start.dynamics.background_rate),
-        (params.dynamics.background_noise, start.dynamics.background_noise),
-        (params.reading_noise, start.reading_noise),
+    rhythm, readout = free.dynamics.rhythm, free.readout
+    widths = [
+        (lambda f: f.dynamics.rhythm.growth, rhythm.growth, 0.3),
+        (lambda f: f.dynamics.rhythm.frequency, rhythm.frequency, 0.1),
+        (lambda f: f.dynamics.rhythm.coupling, rhythm.coupling, 0.03),
+        (lambda f: f.readout.offset, readout.offset, 1.0),
+        (lambda f: f.readout.cosine, readout.cosine, 0.3),
+        (lambda f: f.readout.sine, readout.sine, 0.3),
+        (lambda f: f.readout.level, readout.level, 0.3),
     ]
-    spread = sum(jnp.sum((jnp.log(value) - jnp.log(centre)) ** 2) for value, centre in wide)
-    return shrunk / 2 + spread / (2 * 2.0**2)
+    out = jax.tree.map(lambda leaf: jnp.full_like(leaf, 2.0), free)
+    for where, leaf, width in widths:
+        if leaf is not None:
+            out = eqx.tree_at(where, out, jnp.full_like(leaf, width))
+    return out
+
+
+class Prior:
+    """Independent normal densities on the unconstrained leaves, centred on the start values."""
+
+    def __init__(self, initial: StateSpaceParams):
+        """Lay centre and widths out as one flat vector, in the order of `parameter_names`."""
+        self.constraints = constraints(initial)
+        free = unconstrain(initial, self.constraints)
+        self.centre = ravel_pytree(free)[0]
+        self.widths = ravel_pytree(prior_widths(free))[0]
+
+    def loss(self, params: StateSpaceParams) -> Float[Array, ""]:
+        """Return the negative log-density, up to a constant."""
+        x = ravel_pytree(unconstrain(params, self.constraints))[0]
+        return jnp.sum(((x - self.centre) / self.widths) ** 2) / 2
+
+    @property
+    def information(self) -> Float[Array, "free free"]:
+        """Return the Hessian of the loss, which is the same everywhere."""
+        return jnp.diag(self.widths**-2)
 
 
 def amplitude(dynamics: Dynamics) -> Float[Array, " channel"]:

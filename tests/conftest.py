@@ -10,6 +10,13 @@ jax.config.update("jax_numpy_rank_promotion", "raise")
 jax.config.update("jax_numpy_dtype_promotion", "strict")
 
 
+def pytest_configure(config):
+    """Keep what is compiled: most of a run is compilation, and the workers share some of it."""
+    jax.config.update("jax_compilation_cache_dir", str(config.cache.mkdir("compiled")))
+    jax.config.update("jax_persistent_cache_min_compile_time_secs", 0)
+    jax.config.update("jax_persistent_cache_min_entry_size_bytes", -1)
+
+
 @pytest.fixture
 def user_errors():
     """Switch the type checker off: a user without it must meet the library's own message."""
