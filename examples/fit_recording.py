@@ -62,7 +62,10 @@ class Clock(NamedTuple):
 def main(argv: list[str] | None = None) -> dict:
     args = parse(argv)
     jax.config.update("jax_enable_x64", True)
-    data = prepare(args.csv, args.holdout, args.horizon, args.seed)
+    try:
+        data = prepare(args.csv, args.holdout, args.seed)
+    except (OSError, ValueError) as problem:
+        raise SystemExit(f"cannot fit {args.csv or 'the built-in tray'}: {problem}") from problem
     clock = start_values(data)
     initial = initial_params(clock.start)
     prior = Prior(initial)
@@ -102,7 +105,7 @@ def parse(argv: list[str] | None) -> argparse.Namespace:
 # Data ---------------------------------------------------------------------------------------------
 
 
-def prepare(csv: Path | None, holdout: float, horizon: int | None, seed: int) -> Data:
+def prepare(csv: Path | None, holdout: float, seed: int) -> Data:
     recording = recordings.read_csv(csv) if csv else tray(key=jax.random.key(seed)).recording
     grid = recordings.on_grid(recording)
     training = round(grid.times.shape[0] * (1 - holdout))

@@ -96,6 +96,7 @@ def eight():
     return check_poisoned(12, 4, 4)
 
 
+@pytest.mark.long
 def test_poisoned_fits_leave_the_others_alone(eight):
     assert eight[1].fits.status.shape == (8, 1)
 
@@ -134,6 +135,7 @@ def test_side_by_side_and_one_by_one_agree(eight):
     check_same(fit(values, params, first, chunk=8).fits, together)
 
 
+@pytest.mark.long
 def test_halving_and_agreement():
     values, params, first = draw(3, starts=4)
     # Two starts of each recording cannot be evaluated, and of the last recording none.

@@ -102,6 +102,7 @@ def hard(hard_and_clean):
     return hard_and_clean[0]
 
 
+@pytest.mark.long
 def test_fitzhugh_nagumo_from_random_starts(hard, least_squares):
     assert reached(hard, least_squares[0]) == 30
     assert np.abs(hard.gaps).max() < 1e-10
@@ -155,6 +156,7 @@ def test_two_hundred_of_two_hundred(values, least_squares, continuity):
     assert single < 180
 
 
+@pytest.mark.long
 def test_result_does_not_depend_on_the_windows(values, hard):
     # Windows of 70 samples, the last one ragged.
     other = many_fhn(values, random_starts(1), HardContinuity(), 70)

@@ -181,6 +181,7 @@ CASES = {  # growth: (noise, most wrong signs at 60 periods)
 }
 
 
+@pytest.mark.long
 def test_sign_of_growth_on_simulations():
     growth = jnp.array(list(CASES))
     noise = jnp.array([c[0] for c in CASES.values()])

@@ -154,6 +154,7 @@ def test_decay_of_the_phase_against_fokker_planck():
     assert abs(slope.imag) < 0.01
 
 
+@pytest.mark.long
 def test_diffrax_solver_meets_the_same_law():
     # Variance of a damped linear unit from rest: s^2 (1 - e^(2at)) / 2|a|.
     a, s, t = -0.5, 0.4, 1.0
