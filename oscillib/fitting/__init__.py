@@ -3,6 +3,7 @@
 from ._collapse import Collapse as Collapse, collapse as collapse
 from ._density import Density as Density, log_density as log_density
 from ._flat import parameter_names as parameter_names
+from ._guard import GuardState as GuardState, guarded as guarded
 from ._information import (
     fisher_gaussian as fisher_gaussian,
     fisher_simulated as fisher_simulated,
@@ -43,6 +44,7 @@ from ._shooting_continuity import (
 from ._shooting_solver import ShootingRecord as ShootingRecord, ShootingState as ShootingState
 from ._spectrum_start import SpectrumStart as SpectrumStart, spectrum_start as spectrum_start
 from ._status import Status as Status, describe as describe
+from ._trace import NonFinite as NonFinite, trace_nonfinite as trace_nonfinite
 from ._weak import (
     Directions as Directions,
     describe_directions as describe_directions,
