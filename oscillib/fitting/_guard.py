@@ -62,7 +62,8 @@ def guarded(optimiser: Any, *, patience: int = 3, backtrack: float = 0.5) -> Any
 
     Put the guard outermost, clipping inside it: one NaN in a gradient makes its global norm NaN,
     and clipping by that turns all entries NaN. Works under `jit`, `scan` and `vmap`, where every
-    lane is guarded by itself. What is checked is real or complex; other arrays pass by.
+    lane is guarded by itself. What is checked is real or complex; other arrays pass by. Memory: one
+    more copy of the parameters and of the optimiser's state.
 
     Arguments:
         optimiser: optax transformation, such as `optax.adam(1e-2)` or a chain.

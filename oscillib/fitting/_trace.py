@@ -95,7 +95,7 @@ def trace_nonfinite(
       whose gradient is not finite the derivative of the loss, of the readout, of the steps (lowest
       window first, in it the step that reverse mode meets first, the last one), of the constraints.
 
-    Takes a few compilations: a diagnosis, not a part of a loop.
+    For one recording. Takes a few compilations: a diagnosis, not a part of a loop.
 
     Arguments:
         step: `step(params, h) -> advance`.
@@ -141,6 +141,11 @@ def trace_nonfinite(
     mask = jnp.ones(values.shape, bool) if mask is None else jnp.asarray(mask)
     check_shape("values", values, (windows.num_samples, None), "(time, channel)")
     check_shape("mask", mask, values.shape, "that of `values`")
+    if mask.dtype != jnp.bool_:
+        raise TypeError(f"`mask` must be boolean, True where observed; got dtype {mask.dtype}.")
+    taken = {"reconstruction", "continuity"} & set(terms or {})
+    if taken:
+        raise ValueError(f"`terms` must have names of their own; got {taken.pop()!r}. Fix: rename.")
     # A parameter that is not finite has no unconstrained value, and is named before any gradient.
     mapped = constraints is not None and bool(all_finite(params))
     problem = Problem(
@@ -163,22 +168,26 @@ def trace_nonfinite(
 
 
 def _search(problem: Problem) -> NonFinite:
-    def total(free, starts):
-        out = problem.replay(free, starts)
-        return sum(out.terms.values()), out
-
-    run = jax.jit(jax.value_and_grad(total, argnums=(0, 1), has_aux=True))
-    (loss, replay), slope = run(problem.free, problem.starts)
+    replay = jax.jit(problem.replay)(problem.free, problem.starts)
     replay = jax.tree.map(np.asarray, replay)
-    if np.isfinite(loss) and bool(all_finite(slope)):
-        return NonFinite(False)
-    if not np.isfinite(loss):
+    if not np.isfinite(sum(replay.terms)):
         return _forward(problem, replay)
-    return _backward(problem, replay, slope)
+
+    # One after the other: a term that counts for nothing would still spoil a common gradient.
+    def slopes(*unknowns):
+        each = [lambda *x, k=k: problem.replay(*x).terms[k] for k in range(len(problem.names))]
+        each = [jax.grad(term, argnums=(0, 1))(*unknowns) for term in each]
+        return each, jax.tree.map(lambda *x: sum(x), *each)
+
+    each, total = jax.jit(slopes)(problem.free, problem.starts)
+    if bool(all_finite(total)):
+        return NonFinite(False)
+    return _backward(problem, replay, each, total)
 
 
 def _forward(problem: Problem, replay: Replay) -> NonFinite:
-    terms = tuple(name for name, value in replay.terms.items() if not np.isfinite(value))
+    pairs = zip(problem.names, replay.terms, strict=True)
+    terms = tuple(name for name, value in pairs if not np.isfinite(value))
     found = (
         _bad_input(problem)
         or bad_state(problem, replay, padding=False)
@@ -250,18 +259,14 @@ def _bad_gap(problem: Problem, replay: Replay, terms: tuple[str, ...]) -> Found 
     return None
 
 
-def _backward(problem: Problem, replay: Replay, slope: Any) -> NonFinite:
-    terms, slopes = [], []
-    for name in replay.terms:
-        term = jax.grad(lambda *a, name=name: problem.replay(*a).terms[name], argnums=(0, 1))
-        gradient = jax.jit(term)(problem.free, problem.starts)
-        if not bool(all_finite(gradient)):
-            terms.append(name)
-            slopes.append(gradient)
+def _backward(problem: Problem, replay: Replay, each: list[Any], total: Any) -> NonFinite:
+    pairs = zip(problem.names, each, strict=True)
+    broken = {name: slope for name, slope in pairs if not bool(all_finite(slope))}
+    terms = tuple(broken)
     words = "the sum of the gradients of all terms overflows"
-    found, leaves = Found("term", words, {}), bad_leaves(slope)
+    found, leaves = Found("term", words, {}), bad_leaves(total)
     if terms:
-        name, leaves = terms[0], bad_leaves(slopes[0])
+        name, leaves = terms[0], bad_leaves(broken[terms[0]])
         found = (
             _bad_input(problem)
             or bad_state(problem, replay, padding=True)
@@ -272,4 +277,4 @@ def _backward(problem: Problem, replay: Replay, slope: Any) -> NonFinite:
         f"Backward: {words}. Terms whose gradient is not finite: {', '.join(terms) or 'none'}; "
         f"it reaches {', '.join(f'`{leaf}`' for leaf in leaves)}."
     )
-    return NonFinite(True, "backward", place, tuple(terms), leaves=leaves, message=words, **where)
+    return NonFinite(True, "backward", place, terms, leaves=leaves, message=words, **where)

@@ -68,7 +68,8 @@ def _through_readout(problem: Problem, states: Array, pull: Array) -> tuple[Arra
     if index is None:
         return pulled, None
     where = problem.at(*index)
-    both = jax.jit(jax.jacrev(problem.readout, argnums=(0, 1)))(states[index], problem.params)
+    # Forward mode keeps channels apart.
+    both = jax.jit(jax.jacfwd(problem.readout, argnums=(0, 1)))(states[index], problem.params)
     rows = [~np.isfinite(leaf).reshape(pull.shape[-1], -1) for leaf in jax.tree.leaves(both)]
     channel = first_true(np.concatenate(rows, axis=1).any(axis=1))
     words = f"{spot(problem, where)} the derivative of the readout is not finite"

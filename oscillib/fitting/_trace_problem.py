@@ -33,7 +33,7 @@ class Replay(NamedTuple):
     states: Any
     predicted: Any
     gaps: Any
-    terms: dict[str, Any]
+    terms: tuple[Any, ...]
 
 
 @dataclass(frozen=True)
@@ -53,19 +53,25 @@ class Problem:
     continuity: Callable | None
     terms: dict[str, Callable]
 
+    @property
+    def names(self) -> tuple[str, ...]:
+        """Names of all terms, in the order of their values in a replay."""
+        joined = () if self.continuity is None else ("continuity",)
+        return ("reconstruction", *joined, *self.terms)
+
     def replay(self, free: Any, starts: Array) -> Replay:
         """Compute the terms of the loss, and what leads to them."""
         params = self.to_params(free)
         rolled = roll_windows(self.step, params, starts, self.windows)
         predicted = jax.vmap(jax.vmap(self.readout, (0, None)), (0, None))(rolled.states, params)
-        terms = {"reconstruction": self.misfit(predicted)}
+        terms = [self.misfit(predicted)]
         if self.continuity is not None:
-            terms["continuity"] = self.continuity(rolled.gaps)
+            terms.append(self.continuity(rolled.gaps))
+            check_shape("continuity(gaps)", terms[1], (), "()")
         for name, term in self.terms.items():
-            terms[name] = term(params)
-        for name, value in terms.items():
-            check_shape(f"the term `{name}`", value, (), "()")
-        return Replay(rolled.states, predicted, rolled.gaps, terms)
+            terms.append(term(params))
+            check_shape(f"terms[{name!r}](params)", terms[-1], (), "()")
+        return Replay(rolled.states, predicted, rolled.gaps, tuple(terms))
 
     def misfit(self, predicted: Array) -> Array:
         """Return the reconstruction loss."""
