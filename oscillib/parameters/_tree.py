@@ -4,6 +4,7 @@ from typing import TypeVar
 
 import jax
 import jax.numpy as jnp
+import numpy as np
 from jax.core import Tracer
 from jaxtyping import Array, Bool, PyTree
 
@@ -37,7 +38,7 @@ def unconstrain(params: PyTree, constraints: PyTree) -> PyTree:
     _check_structure(params, constraints)
     free = jax.tree.map(lambda c, p: c.to_free(p), constraints, params)
     for path, leaf in jax.tree_util.tree_leaves_with_path(free):
-        if not isinstance(leaf, Tracer) and not bool(jnp.all(jnp.isfinite(leaf))):
+        if not isinstance(leaf, Tracer) and not np.all(np.isfinite(leaf)):
             name = jax.tree_util.keystr(path)
             raise ValueError(
                 f"`params{name}` must lie strictly inside its constraint; its unconstrained value "

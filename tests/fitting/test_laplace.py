@@ -137,7 +137,9 @@ def test_unidentifiable_pair_is_refused_and_the_rest_is_not():
     )
     directions, params = jax.tree.map(lambda v: v[0], (out.directions, found.params))
     (words,) = describe_directions(directions, params, constraints)
-    assert "`gain` and `noise` trade off" in words
+    # Which of two equals comes first is a matter of rounding.
+    pairs = ("`gain` and `noise` trade off", "`noise` and `gain` trade off")
+    assert any(pair in words for pair in pairs)
     # A recording that is lost refuses everything of its own, and nothing of the others.
     _, lost = batch(start, ys.at[1, 0].set(jnp.nan))
     assert lost.refused["centre"][1] and jnp.isnan(lost.lower["centre"][1])

@@ -118,6 +118,7 @@ def check_same(other, together):
     np.testing.assert_allclose(other.covariance, together.fits.covariance, rtol=1e-6, atol=1e-12)
 
 
+@pytest.mark.long
 def test_chunks_agree(eight):
     # A chunk of three does not divide the eight fits.
     arguments, together = eight

@@ -179,6 +179,7 @@ def test_covariance_equals_laplace_without_noise(hard_and_clean, states):
     np.testing.assert_allclose(fit.covariance, other.covariance[:3, :3], rtol=1e-6)
 
 
+@pytest.mark.long
 def test_soft_solution_is_a_minimum_of_the_losses(values):
     windows = cut(TIMES, 20)
     soft = SoftContinuity(scale=[0.02, 0.05], schedule=[0.01, 1.0])

@@ -148,6 +148,7 @@ def test_recordings_share_some_parameters_and_not_others():
     assert fit.predicted.shape == values.shape
 
 
+@pytest.mark.long
 def test_single_precision():
     half = lambda tree: jax.tree.map(lambda x: x.astype(jnp.float32), tree)
     fit = shoot(

@@ -130,6 +130,7 @@ def test_zero_value_and_many_parameters_in_words():
     assert "and 2 more trade off" in words and "raising `x[0]` by 0.01" in words
 
 
+@pytest.mark.long
 def test_unidentifiable_product_after_a_fit():
     # Only the product of two free parameters enters: the Hessian's null direction is curved, and
     # what is left of the gradient gives it a curvature of either sign. The less noise there is,

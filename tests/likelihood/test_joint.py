@@ -3,6 +3,7 @@
 import jax
 import jax.numpy as jnp
 import numpy as np
+import pytest
 
 from oscillib.fields import HopfNetwork, HopfParams
 from oscillib.integrate import (
@@ -48,6 +49,7 @@ def test_matches_the_spread_of_simulated_windows(step):
     np.testing.assert_allclose(joint.covariance[0], np.cov(ends.T), rtol=0.06, atol=1e-5)
 
 
+@pytest.mark.long
 def test_one_sample_windows_are_kalman_smoothing(step, pair):
     params, h = pair(), 0.1
     rng = np.random.default_rng(0)

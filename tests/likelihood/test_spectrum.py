@@ -85,6 +85,7 @@ def test_coherence_of_independent_nodes_and_of_one_signal():
     np.testing.assert_allclose(coherence(doubled), 1, rtol=1e-12)
 
 
+@pytest.mark.long
 def test_damped_spectrum_of_the_noisy_unit_where_euler_maruyama_is_wrong(step):
     """Weak noise on a damped unit: Lorentzian, at a step of an eighth of a period."""
     params, h, length = NoisyParams(HopfParams([-0.5], [6.0]), [0.05]), 0.13, 256

@@ -63,6 +63,7 @@ def test_exact_without_saturation(step):
     )
 
 
+@pytest.mark.long
 def test_blocks_equal_the_dense_determinant_and_intervals_may_differ(step):
     from oscillib.integrate import noisy_strang
 
