@@ -5,6 +5,7 @@ import pathlib
 import subprocess
 import sys
 from importlib import resources
+from typing import Any
 
 import numpy as np
 import pytest
@@ -74,7 +75,7 @@ def test_yearly_sunspots(tmp_path):
     # 11 years: common practice, no source.
     import statsmodels.api as sm
 
-    data = sm.datasets.sunspots.load_pandas().data
+    data: Any = sm.datasets.sunspots.load_pandas().data
     file = save(tmp_path / "s.csv", "year,number", [data.YEAR, data.SUNACTIVITY])
     report = run("--csv", file, "--holdout", 0.5, "--horizon", 10, out=tmp_path)
     assert 10.2 < report["units"][0]["period"]["value"] < 11.6

@@ -1,8 +1,10 @@
 from typing import Any
 
 import jax.numpy as jnp
+import numpy as np
 import pytest
 
+from oscillib.fields import HopfNetwork, HopfParams
 from oscillib.fitting import trace_nonfinite
 from oscillib.integrate import cut
 from oscillib.losses import continuity
@@ -64,23 +66,27 @@ def test_start():
 
 @pytest.mark.parametrize("dtype", [jnp.float32, jnp.float64])
 def test_blow_up_at_a_known_step_of_a_known_window(dtype):
-    # A cubic with the wrong sign: 1 -> 10^3 -> 10^9 -> 10^27 -> 10^81 -> 10^243 -> overflow, and
-    # in single precision after 10^27; from 0.1 it only shrinks. Arithmetic by hand.
-    windows = cut(jnp.arange(15, dtype=dtype), 7)
-    values = jnp.zeros((15, 1), dtype)
+    # Negative saturation, r' = r^3: 1 / r^2 falls by 2 per time unit, from 4 to 0 in 2 time units,
+    # and from 100 in 50: closed form. Steps of 0.3 pass 2 with the seventh.
+    def step(params, h):
+        flow = HopfNetwork().unit_flow(params, h)
+        return lambda t, y: flow(y)
+
+    zero, one = jnp.zeros(2, dtype), jnp.ones(2, dtype)
+    starts = jnp.asarray([[[0.1, 0.1], [0, 0]], [[0.1, 0.5], [0, 0]]], dtype)
     found = trace_nonfinite(
-        lambda params, h: lambda t, y: params * y**3,
-        lambda y, params: y,
-        jnp.asarray(1.0, dtype),
-        jnp.array([[0.1], [10.0]], dtype),
-        windows,
-        values,
-        scale=jnp.ones(1, dtype),
+        step,
+        lambda y, params: y[0],
+        HopfParams(zero, one, saturation=-one),
+        starts,
+        cut(jnp.asarray(0.3 * np.arange(21), dtype), 10),
+        jnp.zeros((21, 2), dtype),
+        scale=one,
+        mask=jnp.ones((21, 2), bool).at[:, 0].set(False),
     )
-    step = {jnp.float32: 4, jnp.float64: 6}[dtype]
-    assert (found.direction, found.place, found.window, found.step) == ("forward", "step", 1, step)
-    assert (found.sample, found.time, found.index) == (7 + step, 7.0 + step, (0,))
-    assert f"in window 1, after step {step} (sample {7 + step}, time {7 + step})" in str(found)
+    assert (found.direction, found.place, found.window, found.step) == ("forward", "step", 1, 7)
+    assert found.sample == 17 and found.time == pytest.approx(5.1) and found.index == (0, 1)
+    assert "in window 1, after step 7 (sample 17, time 5.1), the state becomes" in str(found)
 
 
 def test_readout():

@@ -95,8 +95,8 @@ def test_masked_entries_have_no_influence(information):
     whole = information(params, values, mask)
     spoiled = information(params, jnp.where(mask, values, jnp.nan), mask)
     np.testing.assert_array_equal(whole, spoiled)
-    # What is never observed says nothing; fewer samples say less about the offset, whose information
-    # does not depend on the values.
+    # What is never observed says nothing; fewer samples say less about the offset, whose
+    # information does not depend on the values.
     assert float(jnp.max(jnp.abs(information(params, values, jnp.zeros_like(mask))))) == 0
     full = information(params, values, jnp.ones_like(mask))
     assert full[3, 3] > whole[3, 3]
