@@ -1,5 +1,7 @@
 """Settings of every test: 64-bit floats, nothing broadcast or promoted silently."""
 
+import os
+
 import jax
 import jaxtyping
 import pytest
@@ -18,6 +20,7 @@ def pytest_configure(config):
     # Short tests compile longer than they run; the long ones, and users, take the optimised code.
     if config.option.markexpr == "not long":
         jax.config.update("jax_disable_most_optimizations", True)
+        os.environ.setdefault("XLA_FLAGS", "--xla_cpu_use_fusion_emitters=false")
 
 
 @pytest.fixture

@@ -36,7 +36,7 @@ def better(forecast, rival):
     [
         ("", "is empty"),
         ("time,glow\n0,1\n1,two\n", "two"),
-        ("time,glow\n0,1\n0,2\n", "increasing"),
+        ("time,glow\n0,1\n0,2\n", "increase strictly"),
     ],
 )
 def test_a_file_it_cannot_use_is_refused_in_words(tmp_path, text, words):
