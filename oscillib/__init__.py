@@ -5,6 +5,7 @@ from importlib.metadata import version as _version
 from . import (
     analysis as analysis,
     demo as demo,
+    encoders as encoders,
     evaluate as evaluate,
     fields as fields,
     fitting as fitting,
