@@ -307,14 +307,19 @@ def forecast_held_out(data: Data, clock: Clock, params: Any, horizon: int | None
     origins = evaluate.rolling_origins(
         count, first=data.training - 1, horizon=horizon, stride=stride
     )
-    filtered = likelihood.gaussian_filter(
-        noisy_step, noisy_readout, params, values, mask,
-        h=clock.interval, start=filter_start(data),
-    )  # fmt: skip
-    beliefs = likelihood.Gaussian(filtered.means[origins], filtered.covariances[origins])
-    model = likelihood.forecast(
-        noisy_step, noisy_readout, params, beliefs, horizon, h=clock.interval
-    )
+
+    @jax.jit
+    def predict(params):
+        filtered = likelihood.gaussian_filter(
+            noisy_step, noisy_readout, params, values, mask,
+            h=clock.interval, start=filter_start(data),
+        )  # fmt: skip
+        beliefs = likelihood.Gaussian(filtered.means[origins], filtered.covariances[origins])
+        return likelihood.forecast(
+            noisy_step, noisy_readout, params, beliefs, horizon, h=clock.interval
+        )
+
+    model = predict(params)
     chosen = evaluate.choose_autoregression(
         values[: data.training], mask[: data.training],
         orders=(1, 2, 4, 8), ridges=(1e-4, 1e-2, 1.0), horizon=horizon,
