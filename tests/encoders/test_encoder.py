@@ -125,9 +125,15 @@ def test_a_batch_is_its_recordings_in_any_order(run, run_many):
     close(straight.law.mean[0], mean)
     close(straight.law.factor[0], factor)
     close(straight.weights[0], weights)
+    # Padding changes no bit in a batch either.
+    rows = ((0, 0), (0, 5), (0, 0))
+    padded = (jnp.pad(data[0], rows[:2]), jnp.pad(data[1], rows), jnp.pad(data[2], rows))
+    long = propose(encoder, *padded)
+    assert bits(long.law) == bits(straight.law)
+    assert bits(long.weights[..., :6]) == bits(straight.weights)
     # All leaves are arrays, so other weights and recordings compile nothing.
     other = propose(jax.tree.map(lambda w: 1.1 * w, encoder), data[0], data[1] + 1, data[2])
-    assert np.all(other.law.mean != straight.law.mean) and len(traces) == 1
+    assert np.all(other.law.mean != straight.law.mean) and len(traces) == 2
 
 
 def test_any_block_can_be_exchanged():

@@ -21,6 +21,11 @@ CORRELATED = eqx.tree_at(
 )
 
 
+@jax.jit
+def run(head, informed, prior):
+    return head(FEATURES, informed, prior)
+
+
 def trained(kind, dtype=None):
     head = GaussianHead(4, 3, kind=kind, width=5, key=jax.random.key(0), dtype=dtype)
     last = lambda h: (h.network.layers[-1].weight, h.network.layers[-1].bias)
@@ -33,14 +38,14 @@ def trained(kind, dtype=None):
 @pytest.mark.parametrize("kind", ["diagonal", "full"])
 @pytest.mark.parametrize("prior", [PRIOR, CORRELATED])
 def test_untrained_or_uninformed_it_is_the_prior_bit_for_bit(kind, prior):
-    head = GaussianHead(4, 3, kind=kind, key=jax.random.key(0))
-    for law in (head(FEATURES, YES, prior), trained(kind)(FEATURES, NO, prior)):
+    head = GaussianHead(4, 3, kind=kind, width=5, key=KEY)
+    for law in (run(head, YES, prior), run(trained(kind), NO, prior)):
         np.testing.assert_array_equal(law.mean, prior.law.mean)
         np.testing.assert_array_equal(law.factor, prior.law.factor)
         np.testing.assert_allclose(law.divergence(prior.law), 0, atol=1e-15)
     # Not even a network gone wild moves it where there is nothing to go by.
     wild = jax.tree.map(lambda w: w * jnp.inf, trained(kind))
-    assert jnp.all(jnp.isfinite(wild(FEATURES, NO, prior).factor))
+    assert jnp.all(jnp.isfinite(run(wild, NO, prior).factor))
 
 
 @pytest.mark.parametrize("kind", ["diagonal", "full"])
@@ -56,12 +61,12 @@ def test_trained_it_is_the_formula():
     out = np.asarray(trained("full").network(FEATURES))
     lower = np.diag(np.exp(out[3:6]))
     lower[1, 0], lower[2, 0], lower[2, 1] = out[6:]
-    law = trained("full")(FEATURES, YES, CORRELATED)
+    law = run(trained("full"), YES, CORRELATED)
     factor = np.asarray(CORRELATED.law.factor)
     np.testing.assert_allclose(law.mean, CORRELATED.law.mean + factor @ out[:3], rtol=1e-13)
     np.testing.assert_allclose(law.factor, factor @ lower, rtol=1e-13)
     assert np.all(np.diagonal(law.factor) > 0)
-    diagonal = trained("diagonal")(FEATURES, YES, PRIOR).covariance
+    diagonal = run(trained("diagonal"), YES, PRIOR).covariance
     np.testing.assert_array_equal(diagonal, np.diag(np.diagonal(diagonal)))
 
 

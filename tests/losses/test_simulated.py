@@ -79,7 +79,8 @@ def test_a_simulation_that_blows_up_is_flagged_and_moves_nothing():
         law = encoder(None, pair.values, pair.mask, prior).law
         return posterior_loss(law, pair.free), pair
 
-    slopes, pairs = jax.vmap(jax.grad(loss, has_aux=True), in_axes=(None, 0))(encoder, keys)
+    graded = jax.jit(jax.vmap(jax.grad(loss, has_aux=True), in_axes=(None, 0)))
+    slopes, pairs = graded(encoder, keys)
     bad = np.asarray(pairs.params["rate"] > 1)
     assert 0 < bad.sum() < 6
     np.testing.assert_array_equal(pairs.finite, ~bad)
