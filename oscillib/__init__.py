@@ -4,6 +4,7 @@ from importlib.metadata import version as _version
 
 from . import (
     analysis as analysis,
+    cohort as cohort,
     demo as demo,
     encoders as encoders,
     evaluate as evaluate,

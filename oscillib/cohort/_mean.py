@@ -1,0 +1,268 @@
+"""Mean loss over recordings and its gradient, the same to the last bit on any number of devices."""
+
+from collections.abc import Callable
+from typing import Any, NamedTuple
+
+import equinox as eqx
+import jax
+import jax.numpy as jnp
+from jax.core import Tracer
+from jax.sharding import Mesh, NamedSharding, PartitionSpec
+from jaxtyping import Array, Bool, Float, Int
+
+from .._validate import check_count
+from ..parameters import all_finite
+from ._mesh import (
+    batch_length,
+    check_mesh,
+    gather_processes,
+    own_devices,
+    place,
+    process_count,
+    replicate,
+)
+
+
+class CohortMean(NamedTuple):
+    """What a function made by `mean_over_recordings` returns.
+
+    Attributes:
+        value: mean loss over the recordings that count, scalar; 0 if none does.
+        gradient: its gradient, a tree like the parameters, `None` at what is no floating array.
+        values: loss of each recording of the batch, `(recording,)`; 0 where it does not count.
+        finite: False where a recording that is present has a loss or a gradient that is not
+            finite, shape `(recording,)`.
+        count: how many recordings count, scalar.
+    """
+
+    value: Float[Array, ""]
+    gradient: Any
+    values: Float[Array, " recording"]
+    finite: Bool[Array, " recording"]
+    count: Int[Array, ""]
+
+
+def mean_over_recordings(
+    loss: Callable[[Any, Any], Any],
+    mesh: Mesh,
+    *,
+    group: int | None,
+    leave_out_bad: bool = False,
+) -> Callable[[Any, Any, Any], CohortMean]:
+    """Make the function that gives the mean of a loss over a batch, and its gradient.
+
+        value = sum_i present_i loss(params, batch_i) / sum_i present_i
+
+    The result is the same bit for bit on any number of devices, in one process or in several, if
+    the devices are of one kind. This is by construction. The batch is cut into groups of `group`
+    recordings. One compiled program, for one device and one group, gives the group's summed losses
+    and gradients, and no device runs any other. The group sums go to where the parameters are and
+    are added as a tree of fixed shape: neighbours in pairs, then the pairs' sums in pairs, a loose
+    end going up as it is. The update that follows is compiled for one device, as usual, and so is
+    the same too. A program that the compiler itself cuts over devices has no such property: it
+    rounds in one way for 1 device and in another for 2. What may still differ between machines is
+    a sum over very many entries of one recording (seen at a million), which the runtime on a CPU
+    cuts by its number of cores. Another order of the batch, or another `group`, changes results by
+    rounding.
+
+    With `group=None` the compiler cuts one program for the whole batch over the devices: one
+    compilation instead of one a device, and results that agree across numbers of devices up to
+    rounding only.
+
+    Absent rows change neither value nor gradient by a bit, whatever they hold.
+
+    The cost: every device compiles the program once; `batch / group` calls, shared out over the
+    devices; memory for `group` gradients on each device and `batch / group` where the parameters
+    are; in every call the parameters are copied to each device. Take `group` as the batch size over
+    the greatest number of devices you will use. Host-side: call it outside `jit`.
+
+    Arguments:
+        loss: `loss(params, recording) -> scalar`, for one recording without the leading axis; the
+            recording is any PyTree. Its noise, if any, comes from a key within the recording.
+        mesh: from `recording_mesh`.
+        group: recordings in a group. Keep it the same to get the same bits. `None`: see above.
+        leave_out_bad: take the mean over the recordings whose loss and gradient are finite; look at
+            `finite` to see which were left out. Default False: one bad recording makes the mean
+            non-finite.
+
+    Returns:
+        `mean(params, batch, present) -> CohortMean`. `params` is any PyTree on one device,
+        differentiated by its floating arrays; `batch` has a leading `recording` axis, the rows of
+        this process, plain arrays or from `place`; `present`, `(recording,)`, is Boolean. The
+        result is where `params` are, and covers the batches of all processes.
+
+    Raises:
+        TypeError: `group` is no int; on a call, traced arguments, or `loss` returns no floating
+            number.
+        ValueError: `group` is below 1; no mesh over recordings; on a call, the number of
+            recordings is no multiple of `group` (of the number of devices, if it is `None`),
+            `present` has another length, `params` are spread over devices, or `loss` returns no
+            scalar.
+
+    Example:
+        >>> import jax
+        >>> import jax.numpy as jnp
+        >>> import numpy as np
+        >>> from oscillib.cohort import mean_over_recordings, recording_mesh
+        >>> loss = lambda level, x: jnp.sum((x - level) ** 2)
+        >>> mean = mean_over_recordings(loss, recording_mesh(), group=1)
+        >>> x, present = np.array([[1.0], [3.0], [np.nan]]), np.array([True, True, False])
+        >>> out = mean(jnp.array(0.0), x, present)
+        >>> print(out.value, out.gradient, out.count)
+        5.0 -4.0 2
+
+    Source: pairwise summation; from memory.
+    """
+    check_mesh(mesh)
+    if group is not None:
+        group = check_count("group", group)
+
+    # The program of one device: its shape depends on the group, and on nothing else.
+    @eqx.filter_jit
+    def group_sum(params: Any, rows: Any, present: Any) -> Any:
+        return _group_sum(loss, params, rows, present, leave_out_bad)
+
+    @eqx.filter_jit
+    def at_once(params: Any, rows: Any, present: Any) -> Any:
+        out = _group_sum(loss, params, rows, present, leave_out_bad)
+        return jax.lax.with_sharding_constraint(out, NamedSharding(mesh, PartitionSpec()))
+
+    def mean(params: Any, batch: Any, present: Any) -> CohortMean:
+        home = _home(params, mesh)
+        starts = _starts(batch, present, group)
+        if group is None:
+            spread = at_once(replicate(params, mesh), *place((batch, present), mesh))
+            own = jax.tree.map(lambda x: x.addressable_data(0), spread)
+            sums, marks = jax.device_put(own, home)
+        else:
+            parts = _dispatch(group_sum, params, (batch, present), mesh, group, starts)
+            sums, marks = _add_up(jax.device_put(parts, home), mesh, home)
+        value, gradient = _divide(*sums)
+        values, finite = marks
+        return CohortMean(value, gradient, values, finite, sums[2])
+
+    return mean
+
+
+def _group_sum(loss: Any, params: Any, rows: Any, present: Array, leave_out_bad: bool) -> Any:
+    """Return summed values, gradients and count of some recordings, and each one's value and flag.
+
+    Gradients are taken one by one, so that a bad one is seen and can be left out.
+    """
+    moved, fixed = eqx.partition(params, eqx.is_inexact_array)
+
+    def one(row, here):
+        scalar = lambda moved: _check_scalar(loss(eqx.combine(moved, fixed), row))
+        value, gradient = jax.value_and_grad(scalar)(moved)
+        good = jnp.isfinite(value) & all_finite(gradient)
+        counts = here & good if leave_out_bad else here
+        # Chosen after the gradient has been taken: NaN in an absent row cannot get past.
+        value, gradient = jax.tree.map(lambda x: jnp.where(counts, x, 0), (value, gradient))
+        return (value, gradient, counts.astype(jnp.int32)), (value, good | ~here)
+
+    sums, marks = jax.vmap(one)(rows, present)
+    return jax.tree.map(lambda x: jnp.sum(x, axis=0, dtype=x.dtype), sums), marks
+
+
+def _dispatch(
+    group_sum: Any, params: Any, rows: Any, mesh: Mesh, group: int, starts: list[int]
+) -> list[Any]:
+    """Run each group on its device, and return what comes back in the order of the groups."""
+    devices = own_devices(mesh)
+    arrays, fixed = eqx.partition(params, eqx.is_array)
+    copies = [eqx.combine(jax.device_put(arrays, device), fixed) for device in devices]
+    parts: list[Any] = [None] * len(starts)
+    # Group j goes to device j modulo their number, so that all have something to do from the start.
+    for j, start in enumerate(starts):
+        own = jax.tree.map(lambda x, a=start: x[a : a + group], rows)
+        k = j % len(devices)
+        parts[j] = group_sum(copies[k], *jax.device_put(own, devices[k]))
+    return parts
+
+
+def _add_up(parts: list[Any], mesh: Mesh, home: Any) -> tuple[Any, Any]:
+    """Add the group sums of all processes in one order, and join the marks of the recordings."""
+    sums = [part[0] for part in parts]
+    marks = jax.tree.map(lambda *xs: jnp.concatenate(xs), *(part[1] for part in parts))
+    # The levels of the tree that lie within the share of this process; then those across.
+    while len(sums) % 2 == 0:
+        sums = _level(sums)
+    if process_count(mesh) > 1:
+        stacked = jax.tree.map(lambda *xs: jnp.stack(xs), *sums)
+        stacked, marks = gather_processes((stacked, marks), mesh, home)
+        number = stacked[0].shape[0]
+        sums = [jax.tree.map(lambda x, i=i: x[i], stacked) for i in range(number)]
+    while len(sums) > 1:
+        sums = _level(sums)
+    return sums[0], marks
+
+
+def _level(sums: list[Any]) -> list[Any]:
+    """Add neighbours in pairs; a loose end goes up as it is."""
+    pairs = zip(sums[::2], sums[1::2], strict=False)
+    return [_add(a, b) for a, b in pairs] + sums[len(sums) // 2 * 2 :]
+
+
+@jax.jit
+def _add(a: Any, b: Any) -> Any:
+    return jax.tree.map(lambda x, y: x + y, a, b)
+
+
+@jax.jit
+def _divide(value: Array, gradient: Any, count: Array) -> Any:
+    count = jnp.maximum(count, 1)
+    return jax.tree.map(lambda x: x / count.astype(x.dtype), (value, gradient))
+
+
+def _home(params: Any, mesh: Mesh) -> Any:
+    """Return the one device where the parameters are."""
+    homes = set()
+    for path, leaf in jax.tree_util.tree_leaves_with_path(params):
+        if isinstance(leaf, Tracer):
+            raise TypeError(
+                "`params` must hold known values, because this function sends them to devices; "
+                "got a traced array. Fix: call it outside `jit`, and compile the update after it."
+            )
+        if isinstance(leaf, jax.Array):
+            homes |= leaf.sharding.device_set
+        if len(homes) > 1:
+            raise ValueError(
+                f"`params{jax.tree_util.keystr(path)}` must be on one device, as all of `params`; "
+                f"they are on {len(homes)}. Fix: no `replicate` before this function; or "
+                "`jax.device_put(params, jax.local_devices()[0])`."
+            )
+    return homes.pop() if homes else own_devices(mesh)[0]
+
+
+def _check_scalar(value: Any) -> Array:
+    if jnp.shape(value) != ():
+        raise ValueError(
+            f"`loss` must return a scalar for one recording; got shape {jnp.shape(value)}. "
+            "Fix: sum or average over what it returns."
+        )
+    if not jnp.issubdtype(jnp.result_type(value), jnp.floating):
+        raise TypeError(f"`loss` must return a real floating number; got {jnp.result_type(value)}.")
+    return value
+
+
+def _starts(batch: Any, present: Any, group: int | None) -> list[int]:
+    """Return where groups start, or raise where the batch does not fit."""
+    size = batch_length("batch", batch)
+    if jnp.shape(present) != (size,) or jnp.result_type(present) != jnp.bool_:
+        raise ValueError(
+            f"`present` must be Boolean of shape (recording,) = ({size},); got shape "
+            f"{jnp.shape(present)}, {jnp.result_type(present)}. "
+            f"Fix: `np.ones({size}, bool)` if all are."
+        )
+    for leaf in jax.tree.leaves((batch, present)):
+        if isinstance(leaf, jax.Array) and not leaf.is_fully_addressable:
+            raise ValueError(
+                "`batch` must be the rows of this process; got an array spread over processes. "
+                "Fix: no `place` before this function."
+            )
+    if group is not None and size % group:
+        raise ValueError(
+            f"`batch` must hold a multiple of `group`={group} recordings; got {size} in this "
+            "process. Fix: another `size` in `batches`, or another `group`."
+        )
+    return list(range(0, size, group or size))
