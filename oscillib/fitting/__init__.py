@@ -1,5 +1,6 @@
 """Starting, staging and checking fits of oscillators to recordings."""
 
+from ._bootstrap import Bootstrap as Bootstrap, bootstrap as bootstrap
 from ._collapse import Collapse as Collapse, collapse as collapse
 from ._density import Density as Density, log_density as log_density
 from ._flat import parameter_names as parameter_names
