@@ -1,6 +1,7 @@
 """Mean loss over recordings and its gradient, the same to the last bit on any number of devices."""
 
 from collections.abc import Callable
+from functools import partial
 from typing import Any, NamedTuple
 
 import equinox as eqx
@@ -117,25 +118,17 @@ def mean_over_recordings(
     if group is not None:
         group = check_count("group", group)
 
-    # The program of one device: its shape depends on the group, and on nothing else.
-    @eqx.filter_jit
-    def group_sum(params: Any, rows: Any, present: Any) -> Any:
-        return _group_sum(loss, params, rows, present, leave_out_bad)
-
-    @eqx.filter_jit
-    def at_once(params: Any, rows: Any, present: Any) -> Any:
-        out = _group_sum(loss, params, rows, present, leave_out_bad)
-        return jax.lax.with_sharding_constraint(out, NamedSharding(mesh, PartitionSpec()))
-
     def mean(params: Any, batch: Any, present: Any) -> CohortMean:
         home = _home(params, mesh)
         starts = _starts(batch, present, group)
         if group is None:
-            spread = at_once(replicate(params, mesh), *place((batch, present), mesh))
+            rows = place((batch, present), mesh)
+            spread = _spread_sum(loss, leave_out_bad, mesh, replicate(params, mesh), *rows)
             own = jax.tree.map(lambda x: x.addressable_data(0), spread)
             sums, marks = jax.device_put(own, home)
         else:
-            parts = _dispatch(group_sum, params, (batch, present), mesh, group, starts)
+            run = partial(_group_sum, loss, leave_out_bad)
+            parts = _dispatch(run, params, (batch, present), own_devices(mesh), group, starts)
             sums, marks = _add_up(jax.device_put(parts, home), mesh, home)
         value, gradient = _divide(*sums)
         values, finite = marks
@@ -144,7 +137,7 @@ def mean_over_recordings(
     return mean
 
 
-def _group_sum(loss: Any, params: Any, rows: Any, present: Array, leave_out_bad: bool) -> Any:
+def _sums(loss: Any, leave_out_bad: bool, params: Any, rows: Any, present: Array) -> Any:
     """Return summed values, gradients and count of some recordings, and each one's value and flag.
 
     Gradients are taken one by one, so that a bad one is seen and can be left out.
@@ -164,11 +157,23 @@ def _group_sum(loss: Any, params: Any, rows: Any, present: Array, leave_out_bad:
     return jax.tree.map(lambda x: jnp.sum(x, axis=0, dtype=x.dtype), sums), marks
 
 
+# The program of one device: its shape depends on the group, and on nothing else.
+_group_sum = eqx.filter_jit(_sums)
+
+
+@eqx.filter_jit
+def _spread_sum(
+    loss: Any, leave_out_bad: bool, mesh: Mesh, params: Any, rows: Any, present: Any
+) -> Any:
+    """Return what `_sums` does, on every device, computed by a program over all of them."""
+    out = _sums(loss, leave_out_bad, params, rows, present)
+    return jax.lax.with_sharding_constraint(out, NamedSharding(mesh, PartitionSpec()))
+
+
 def _dispatch(
-    group_sum: Any, params: Any, rows: Any, mesh: Mesh, group: int, starts: list[int]
+    run: Any, params: Any, rows: Any, devices: list[Any], group: int, starts: list[int]
 ) -> list[Any]:
     """Run each group on its device, and return what comes back in the order of the groups."""
-    devices = own_devices(mesh)
     arrays, fixed = eqx.partition(params, eqx.is_array)
     copies = [eqx.combine(jax.device_put(arrays, device), fixed) for device in devices]
     parts: list[Any] = [None] * len(starts)
@@ -176,7 +181,7 @@ def _dispatch(
     for j, start in enumerate(starts):
         own = jax.tree.map(lambda x, a=start: x[a : a + group], rows)
         k = j % len(devices)
-        parts[j] = group_sum(copies[k], *jax.device_put(own, devices[k]))
+        parts[j] = run(copies[k], *jax.device_put(own, devices[k]))
     return parts
 
 
@@ -214,15 +219,18 @@ def _divide(value: Array, gradient: Any, count: Array) -> Any:
     return jax.tree.map(lambda x: x / count.astype(x.dtype), (value, gradient))
 
 
+_NOT_TRACED = (
+    "`{}` must hold known values, because this function sends them to devices; got a traced array. "
+    "Fix: call it outside `jit`, and compile the update after it."
+)
+
+
 def _home(params: Any, mesh: Mesh) -> Any:
     """Return the one device where the parameters are."""
     homes = set()
     for path, leaf in jax.tree_util.tree_leaves_with_path(params):
         if isinstance(leaf, Tracer):
-            raise TypeError(
-                "`params` must hold known values, because this function sends them to devices; "
-                "got a traced array. Fix: call it outside `jit`, and compile the update after it."
-            )
+            raise TypeError(_NOT_TRACED.format("params"))
         if isinstance(leaf, jax.Array):
             homes |= leaf.sharding.device_set
         if len(homes) > 1:
@@ -255,6 +263,8 @@ def _starts(batch: Any, present: Any, group: int | None) -> list[int]:
             f"Fix: `np.ones({size}, bool)` if all are."
         )
     for leaf in jax.tree.leaves((batch, present)):
+        if isinstance(leaf, Tracer):
+            raise TypeError(_NOT_TRACED.format("batch"))
         if isinstance(leaf, jax.Array) and not leaf.is_fully_addressable:
             raise ValueError(
                 "`batch` must be the rows of this process; got an array spread over processes. "

@@ -118,6 +118,12 @@ def check_mesh(mesh: Any) -> None:
             f"`mesh` must be a Mesh with the one axis {RECORDING!r}; got {mesh}. "
             "Fix: `recording_mesh()`."
         )
+    processes = [d.process_index for d in mesh.devices.flat]
+    if processes != sorted(processes):
+        raise ValueError(
+            "`mesh` must hold the devices in the order of their processes; got those of processes "
+            f"{processes}. Fix: `recording_mesh(devices)`."
+        )
 
 
 def batch_length(name: str, batch: Any) -> int:

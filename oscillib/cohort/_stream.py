@@ -40,9 +40,6 @@ class Position(NamedTuple):
     recordings: int | None = None
 
 
-START = Position()
-
-
 class Batch(NamedTuple):
     """Some recordings of a cohort, as this process sees them.
 
@@ -67,7 +64,7 @@ def batches(
     size: int,
     seed: int | None,
     last: Literal["pad", "drop"],
-    position: Position = START,
+    position: Position | None = None,
     epochs: int | None = None,
     ahead: int = 0,
     process_index: int | None = None,
@@ -92,7 +89,7 @@ def batches(
         last: what to do where the last batch of an epoch is not full: `"pad"` fills it up with rows
             that `present` marks as absent; `"drop"` leaves its recordings out (in the next epoch
             other ones).
-        position: where to start, default the beginning.
+        position: where to start, default (`None`) the beginning.
         epochs: the stream ends before this epoch begins; default `None`: it never ends.
         ahead: batches that a thread reads before they are asked for, default 0: no thread.
         process_index: which part to read, default `jax.process_index()`.
@@ -136,7 +133,7 @@ def batches(
         )
     end = None if epochs is None else check_count("epochs", epochs, least=0)
     process, processes = _check_process(process_index, process_count, size)
-    start = _check_position(position, seed, count)
+    start = _check_position(position or Position(), seed, count)
     least = size if last == "drop" else 1  # recordings without which there is no further batch
     own = slice(process * size // processes, (process + 1) * size // processes)
 
