@@ -120,11 +120,12 @@ def default_frequencies(times: Any, *, oversample: int = 5) -> Array:
             "traced array. Fix: call `default_frequencies` outside `jit` and pass the result in."
         )
     oversample = check_count("oversample", oversample)
+    # Taken before the conversion, which would hide the values of an array known inside `jit`.
+    t = np.asarray(times, dtype=np.float64)
     times = as_float(times)
     check_shape("times", times, (None,), "(time,)")
     if times.shape[0] < 3:
         raise ValueError(f"`times` must hold at least 3 samples; got {times.shape[0]}.")
-    t = np.asarray(times, dtype=np.float64)
     check_values("times", np.diff(t), lambda d: d > 0, "increasing; its differences positive")
     step = 2 * np.pi / (t[-1] - t[0])
     highest = np.pi / np.median(np.diff(t))

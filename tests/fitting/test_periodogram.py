@@ -196,6 +196,12 @@ def test_errors(user_errors, change, error, words):
         periodogram(**(good | change))
 
 
+def test_default_frequencies_of_known_times_inside_jit():
+    times = np.arange(5.0)
+    inside = jax.jit(lambda x: x + default_frequencies(times))(0.0)
+    np.testing.assert_array_equal(inside, default_frequencies(times))
+
+
 def test_default_frequencies_errors(user_errors):
     with pytest.raises(TypeError, match="outside `jit`"):
         jax.jit(default_frequencies)(jnp.arange(5.0))
