@@ -70,7 +70,7 @@ def main(argv: list[str] | None = None) -> dict:
     initial = initial_params(clock.start)
     prior = Prior(initial)
     params, windows = fit_windows(data, clock, initial, prior, rounds=args.rounds)
-    params, fit = fit_noise(data, clock, params, prior, max_steps=2 * args.rounds)
+    params, fit = fit_noise(data, clock, params, prior, max_steps=3 * args.rounds)
     forecast = forecast_held_out(data, clock, params, args.horizon)
     report = {
         "input": describe_input(data),
@@ -280,12 +280,13 @@ def fit_noise(
         if state.status != fitting.Status.RUNNING:
             break
     progress.close()
+    running = state.status == fitting.Status.RUNNING
     params = state.params
     uncertainty = jax.jit(
         lambda p, matrix: fitting.laplace(loss, p, which, curvature=matrix, widths=prior.widths)
     )(params, state.curvature)
     report = {
-        "status": fitting.describe(state.status),
+        "status": fitting.describe(fitting.Status.STEP_LIMIT if running else state.status),
         "steps": int(state.steps),
         "log_likelihood": number(prior.loss(params) - state.loss),
         "standard_errors_off": number(jnp.sqrt(state.decrement)),
