@@ -195,7 +195,7 @@ def _read(path: Path) -> tuple[dict[str, Any], dict[str, np.ndarray]]:
         raise FileNotFoundError(f"{path}: there is no such checkpoint.")
     try:
         # Reading everything compares everything with its check sum.
-        with np.load(path, allow_pickle=False) as file:
+        with path.open("rb") as opened, np.load(opened, allow_pickle=False) as file:
             arrays = {name: file[name] for name in file.files}
         header = json.loads(arrays.pop(HEADER).tobytes())
         known, number = header["format"] == FORMAT, header["format_version"]

@@ -89,8 +89,9 @@ def mean_over_recordings(
     Returns:
         `mean(params, batch, present) -> CohortMean`. `params` is any PyTree on one device,
         differentiated by its floating arrays; `batch` has a leading `recording` axis, the rows of
-        this process, plain arrays or from `place`; `present`, `(recording,)`, is Boolean. The
-        result is where `params` are, and covers the batches of all processes.
+        this process, plain arrays; `present`, `(recording,)`, is Boolean. The result covers the
+        batches of all processes. It is bound to the device where `params` are; if they start there
+        by `jax.device_put(params, jax.local_devices()[0])`, the update is compiled once, not twice.
 
     Raises:
         TypeError: `group` is no int; on a call, traced arguments, or `loss` returns no floating

@@ -1,7 +1,7 @@
 """Batches from a cohort that may be larger than memory, in an order that a position can resume."""
 
 from collections import deque
-from collections.abc import Iterator
+from collections.abc import Generator, Iterator
 from concurrent.futures import Future, ThreadPoolExecutor
 from typing import Any, Literal, NamedTuple, Protocol, runtime_checkable
 
@@ -69,7 +69,7 @@ def batches(
     ahead: int = 0,
     process_index: int | None = None,
     process_count: int | None = None,
-) -> Iterator[Batch]:
+) -> Generator[Batch, None, None]:
     """Go through a cohort batch by batch, in a new order each epoch; host-side.
 
     A recording is read when its batch is made and not before, so that the cohort need not fit into
@@ -96,7 +96,8 @@ def batches(
         process_count: how many parts there are, default `jax.process_count()`.
 
     Returns:
-        An iterator over `Batch`es, checked when it is made.
+        A generator of `Batch`es, its arguments checked when it is made. Its `close()` ends the
+        thread of `ahead`, and so does its last batch.
 
     Raises:
         TypeError: a number is no int; `seed` is neither an int nor `None`.
@@ -155,7 +156,7 @@ def batches(
     return _read(source, plan(), ahead)
 
 
-def _read(source: Any, plan: Iterator[Any], ahead: int) -> Iterator[Batch]:
+def _read(source: Any, plan: Iterator[Any], ahead: int) -> Generator[Batch, None, None]:
     def read(rows, present, after):
         return Batch(_stack([source[int(i)] for i in rows], rows), rows, present, after)
 

@@ -46,6 +46,7 @@ def start():
     draw = np.random.default_rng(1).normal
     shapes = {"back": (UNITS, UNITS), "in": (UNITS, CHANNELS), "score": (UNITS,), "out": (3, UNITS)}
     params = {name: jnp.asarray(draw(size=shape)) for name, shape in shapes.items()}
+    params = jax.device_put(params, jax.local_devices()[0])
     return params, OPTIMISER.init(params), jax.random.key(7)
 
 
