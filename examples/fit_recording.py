@@ -36,6 +36,7 @@ from oscillib.plots import plot_fit
 
 CYCLES = 4  # a rhythm must be seen this often in the training part; slower is trend
 NORMAL_90 = 1.6448536
+DRAWS = 20  # parameter sets behind a forecast band
 
 
 class Data(NamedTuple):
@@ -71,7 +72,7 @@ def main(argv: list[str] | None = None) -> dict:
     prior = Prior(initial)
     params, windows = fit_windows(data, clock, initial, prior, rounds=args.rounds)
     params, fit = fit_noise(data, clock, params, prior, max_steps=3 * args.rounds)
-    forecast = forecast_held_out(data, clock, params, args.horizon)
+    forecast = forecast_held_out(data, clock, params, fit, args.horizon)
     report = {
         "input": describe_input(data),
         "units": describe_units(data, clock, params, fit),
@@ -298,7 +299,9 @@ def fit_noise(
 # Forecasts ----------------------------------------------------------------------------------------
 
 
-def forecast_held_out(data: Data, clock: Clock, params: Any, horizon: int | None) -> dict:
+def forecast_held_out(
+    data: Data, clock: Clock, params: Any, fit: dict, horizon: int | None
+) -> dict:
     """Forecast from rolling origins in the held-out part, beside three simple statistics."""
     values, mask = data.scaled.values, data.scaled.mask
     count = values.shape[0]
@@ -309,7 +312,6 @@ def forecast_held_out(data: Data, clock: Clock, params: Any, horizon: int | None
         count, first=data.training - 1, horizon=horizon, stride=stride
     )
 
-    @jax.jit
     def predict(params):
         filtered = likelihood.gaussian_filter(
             noisy_step, noisy_readout, params, values, mask,
@@ -320,7 +322,11 @@ def forecast_held_out(data: Data, clock: Clock, params: Any, horizon: int | None
             noisy_step, noisy_readout, params, beliefs, horizon, h=clock.interval
         )
 
-    model = predict(params)
+    # The bands hold what is unknown of the parameters too: the spread of the forecasts of draws.
+    model, drawn = jax.jit(lambda trees: (predict(params), jax.lax.map(predict, trees)))(
+        draw_params(params, fit, DRAWS)
+    )
+    ahead = jnp.mean((drawn.means - model.means[None]) ** 2, axis=0) + model.variances
     chosen = evaluate.choose_autoregression(
         values[: data.training], mask[: data.training],
         orders=(1, 2, 4, 8), ridges=(1e-4, 1e-2, 1.0), horizon=horizon,
@@ -332,7 +338,7 @@ def forecast_held_out(data: Data, clock: Clock, params: Any, horizon: int | None
     def error(predicted):
         return [number(e) for e in evaluate.error_by_horizon(predicted, truth, seen)]
 
-    band = NORMAL_90 * jnp.sqrt(model.variances)
+    band = NORMAL_90 * jnp.sqrt(ahead)
     covered = evaluate.coverage(model.means - band, model.means + band, truth, seen)
     report = {
         "steps": list(range(1, horizon + 1)),
@@ -346,6 +352,15 @@ def forecast_held_out(data: Data, clock: Clock, params: Any, horizon: int | None
         "coverage_90": [number(c) for c in covered],
     }
     return {"report": report, "origin": int(origins[0]), "means": model.means[0], "band": band[0]}
+
+
+def draw_params(params: Any, fit: dict, count: int) -> Any:
+    """Draw parameters from the normal density about the fit; a tree with a leading axis."""
+    flat, unravel = ravel_pytree(unconstrain(params, fit["which"]))
+    values, vectors = jnp.linalg.eigh(fit["uncertainty"].directions.covariance)
+    normal = jax.random.normal(jax.random.key(0), (count, flat.size), flat.dtype)
+    draws = flat + (normal * jnp.sqrt(jnp.maximum(values, 0))[None]) @ vectors.T
+    return jax.vmap(lambda x: constrain(unravel(x), fit["which"], params))(draws)
 
 
 # Report -------------------------------------------------------------------------------------------
