@@ -7,6 +7,7 @@ from typing import Any, NamedTuple
 import equinox as eqx
 import jax
 import jax.numpy as jnp
+import numpy as np
 from jax.core import Tracer
 from jax.sharding import Mesh, NamedSharding, PartitionSpec
 from jaxtyping import Array, Bool, Float, Int
@@ -31,8 +32,8 @@ class CohortMean(NamedTuple):
         value: mean loss over the recordings that count, scalar; 0 if none does.
         gradient: its gradient, a tree like the parameters, `None` at what is no floating array.
         values: loss of each recording of the batch, `(recording,)`; 0 where it does not count.
-        finite: False where a recording that is present has a loss or a gradient that is not
-            finite, shape `(recording,)`.
+        finite: False where a recording that is present has a loss that is not finite (or, with
+            `leave_out_bad`, a gradient), shape `(recording,)`.
         count: how many recordings count, scalar.
     """
 
@@ -73,9 +74,9 @@ def mean_over_recordings(
     Absent rows change neither value nor gradient by a bit, whatever they hold.
 
     The cost: every device compiles the program once; `batch / group` calls, shared out over the
-    devices; memory for `group` gradients on each device and `batch / group` where the parameters
-    are; in every call the parameters are copied to each device. Take `group` as the batch size over
-    the greatest number of devices you will use. Host-side: call it outside `jit`.
+    devices; in every call the parameters are copied to each device; memory for `batch / group`
+    gradients where the parameters are. Take `group` as the batch size over the greatest number of
+    devices you will use. Host-side: call it outside `jit`.
 
     Arguments:
         loss: `loss(params, recording) -> scalar`, for one recording without the leading axis; the
@@ -83,8 +84,8 @@ def mean_over_recordings(
         mesh: from `recording_mesh`.
         group: recordings in a group. Keep it the same to get the same bits. `None`: see above.
         leave_out_bad: take the mean over the recordings whose loss and gradient are finite; look at
-            `finite` to see which were left out. Default False: one bad recording makes the mean
-            non-finite.
+            `finite` to see which were left out. Gradients are then taken one by one, which may cost
+            two to three times as much. Default False: a bad recording makes the mean non-finite.
 
     Returns:
         `mean(params, batch, present) -> CohortMean`. `params` is any PyTree on one device,
@@ -122,6 +123,7 @@ def mean_over_recordings(
     def mean(params: Any, batch: Any, present: Any) -> CohortMean:
         home = _home(params, mesh)
         starts = _starts(batch, present, group)
+        batch, present = _fill(batch, present)
         if group is None:
             rows = place((batch, present), mesh)
             spread = _spread_sum(loss, leave_out_bad, mesh, replicate(params, mesh), *rows)
@@ -139,23 +141,34 @@ def mean_over_recordings(
 
 
 def _sums(loss: Any, leave_out_bad: bool, params: Any, rows: Any, present: Array) -> Any:
-    """Return summed values, gradients and count of some recordings, and each one's value and flag.
-
-    Gradients are taken one by one, so that a bad one is seen and can be left out.
-    """
+    """Return summed values, gradient and count of some recordings, and each one's value, flag."""
     moved, fixed = eqx.partition(params, eqx.is_inexact_array)
 
-    def one(row, here):
-        scalar = lambda moved: _check_scalar(loss(eqx.combine(moved, fixed), row))
-        value, gradient = jax.value_and_grad(scalar)(moved)
-        good = jnp.isfinite(value) & all_finite(gradient)
-        counts = here & good if leave_out_bad else here
-        # Chosen after the gradient has been taken: NaN in an absent row cannot get past.
-        value, gradient = jax.tree.map(lambda x: jnp.where(counts, x, 0), (value, gradient))
-        return (value, gradient, counts.astype(jnp.int32)), (value, good | ~here)
+    def one(moved, row):
+        return _check_scalar(loss(eqx.combine(moved, fixed), row))
 
-    sums, marks = jax.vmap(one)(rows, present)
-    return jax.tree.map(lambda x: jnp.sum(x, axis=0, dtype=x.dtype), sums), marks
+    if leave_out_bad:
+        # Gradients one by one, so that a bad one is seen, and is not yet part of a sum.
+        values, gradients = jax.vmap(jax.value_and_grad(one), (None, 0))(moved, rows)
+        good = jnp.isfinite(values) & jax.vmap(all_finite)(gradients)
+        counts = present & good
+        gradient = jax.tree.map(lambda g: _sum_of(counts, g), gradients)
+    else:
+
+        def total(moved):
+            values = jax.vmap(one, (None, 0))(moved, rows)
+            return _sum_of(present, values), values
+
+        (_, values), gradient = jax.value_and_grad(total, has_aux=True)(moved)
+        good, counts = jnp.isfinite(values), present
+        gradient = jax.tree.map(lambda g: jnp.where(jnp.any(present), g, 0), gradient)
+    sums = _sum_of(counts, values), gradient, jnp.sum(counts, dtype=jnp.int32)
+    return sums, (jnp.where(counts, values, 0), good | ~present)
+
+
+def _sum_of(chosen: Array, x: Array) -> Array:
+    chosen = chosen.reshape(-1, *(1 for _ in x.shape[1:]))
+    return jnp.sum(jnp.where(chosen, x, 0), axis=0, dtype=x.dtype)
 
 
 # The program of one device: its shape depends on the group, and on nothing else.
@@ -241,6 +254,18 @@ def _home(params: Any, mesh: Mesh) -> Any:
                 "`jax.device_put(params, jax.local_devices()[0])`."
             )
     return homes.pop() if homes else own_devices(mesh)[0]
+
+
+def _fill(batch: Any, present: Any) -> tuple[Any, np.ndarray]:
+    """Put a recording that is present in place of absent ones: what they hold might be NaN.
+
+    A gradient that is multiplied by 0 later must be finite.
+    """
+    present = np.asarray(present)
+    if not present.all():
+        index = np.where(present, np.arange(present.size), np.argmax(present))
+        batch = jax.tree.map(lambda x: x[index], batch)
+    return batch, present
 
 
 def _check_scalar(value: Any) -> Array:

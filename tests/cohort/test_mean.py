@@ -102,9 +102,10 @@ def test_a_bad_recording_is_named_and_can_be_left_out(params, rows, bad):
     zero = np.array(rows)
     zero[2, 0] = 0.0
     out = mean_over_recordings(broken, MESH, group=2)(params, zero, ALL)
-    assert out.finite.tolist() == [True, True, False, True, True, True]
+    assert out.finite.tolist() == [True, True, bad == "gradient", True, True, True]
     assert not np.all(np.isfinite(out.gradient.weight))
     assert int(out.count) == 6
+    # One by one, bad ones are seen by their gradient too.
     kept = mean_over_recordings(broken, MESH, group=2, leave_out_bad=True)
     out, absent = kept(params, zero, ALL), kept(params, rows, np.arange(6) != 2)
     assert out.finite.tolist() == [True, True, False, True, True, True]
@@ -201,9 +202,14 @@ def test_number_of_devices_changes_nothing():
 
 
 @pytest.mark.long
+def test_eight_devices_equal_one():
+    # One recording a group, so that each of the eight has one.
+    assert results(run(8, "--group", 1))["8"] == results(run(1, "--group", 1))["1"]
+
+
+@pytest.mark.long
 def test_number_of_processes_changes_nothing():
     alone = results(run(1))["1"]
-    assert results(run(8, "--meshes", 4))["4"] == alone
     for devices in (1, 2):
         with socket.socket() as free:
             free.bind(("localhost", 0))

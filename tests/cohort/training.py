@@ -1,7 +1,7 @@
 """A small training run as a program of its own, so that it can have any number of devices.
 
-    python training.py DEVICES [PROCESS PROCESSES PORT] [--meshes N ...] [--free N ...] [--steps N]
-        [--file RUN.npz]
+    python training.py DEVICES [PROCESS PROCESSES PORT] [--meshes N ...] [--free N ...] [--group N]
+        [--steps N] [--file RUN.npz]
 
 Prints a line of JSON: for each mesh, over so many devices, the bits of parameters, optimiser state
 and losses; with --free also where the compiler shares the work out (`group=None`).
@@ -98,6 +98,7 @@ def main():
     parser.add_argument("process", type=int, nargs="*")
     parser.add_argument("--meshes", type=int, nargs="+")
     parser.add_argument("--free", type=int, nargs="+", default=[])
+    parser.add_argument("--group", type=int, default=2)
     parser.add_argument("--steps", type=int, default=4)
     parser.add_argument("--file", type=Path)
     given = parser.parse_args()
@@ -112,7 +113,7 @@ def main():
         mesh = recording_mesh(jax.devices()[:number])
         ready = lambda: print("saved", flush=True)
         results[number] = bits(
-            train(mesh, group=2, steps=given.steps, file=given.file, ready=ready)
+            train(mesh, group=given.group, steps=given.steps, file=given.file, ready=ready)
         )
         if number in given.free:
             results[f"free {number}"] = bits(train(mesh, group=None, steps=given.steps))
