@@ -408,6 +408,7 @@ def describe_units(data: Data, clock: Clock, params: Any, fit: dict) -> list[dic
                 "channel": channel,
                 "regime": regime(None if refused else float(likely[i])),
                 "probability_self_sustained": None if refused else number(likely[i]),
+                "observed_period": number(2 * np.pi * clock.unit / clock.start.frequency[i]),
                 "growth": triple(*(d.rhythm.growth[i] / clock.unit for d in (dynamics, low, high))),
                 "period": triple(*(2 * np.pi * clock.unit / x for x in (w, wu, wl))),
                 "amplitude": triple(
@@ -461,11 +462,12 @@ def table(report: dict) -> str:
             return f"{t['value']:.4g} (no interval)"
         return f"{t['value']:.4g} [{t['lower']:.4g}, {t['upper']:.4g}]"
 
-    lines = ["", f"{'unit':<32}{'regime':<16}{'period':<26}{'amplitude':<26}{'noise':<24}"]
+    head = f"{'unit':<28}{'seen':>8}  {'regime':<16}{'own period':<24}"
+    lines = ["", head + f"{'amplitude':<24}{'noise':<24}"]
     for unit in report["units"]:
         lines.append(
-            f"{unit['channel'][:31]:<32}{unit['regime']:<16}{show(unit['period']):<26}"
-            f"{show(unit['amplitude']):<26}{show(unit['noise']):<24}"
+            f"{unit['channel'][:27]:<28}{unit['observed_period']:>8.4g}  {unit['regime']:<16}"
+            f"{show(unit['period']):<24}{show(unit['amplitude']):<24}{show(unit['noise']):<24}"
         )
     windows, forecast = report["windows"], report["forecast"]
     lines += [
@@ -492,7 +494,12 @@ def table(report: dict) -> str:
     for k in shown:
         numbers = "".join(f"{forecast[name][k]:>12.3f}" for name in names)
         lines.append(f"{steps[k]:>12}{numbers}")
-    lines += ["weak directions: " + words for words in report["fit"]["weak_directions"]]
+    off, weak = report["fit"]["standard_errors_off"], report["fit"]["weak_directions"]
+    if off is None or off > 0.5:
+        lines += ["", f"the fit stopped {off} standard errors from its optimum: read no interval"]
+    lines += ["weak directions: " + words for words in weak[:3]]
+    if len(weak) > 3:
+        lines += [f"and {len(weak) - 3} more weak directions: see the report"]
     return "\n".join(lines)
 
 

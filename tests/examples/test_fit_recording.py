@@ -79,6 +79,7 @@ def test_yearly_sunspots(tmp_path):
     file = save(tmp_path / "s.csv", "year,number", [data.YEAR, data.SUNACTIVITY])
     report = run("--csv", file, "--holdout", 0.5, "--horizon", 10, out=tmp_path)
     assert 10.2 < report["units"][0]["period"]["value"] < 11.6
+    assert 10.2 < report["units"][0]["observed_period"] < 11.6
     assert better(report["forecast"], "time_average").all()
     assert better(report["forecast"], "persistence").all()
 
@@ -91,7 +92,7 @@ def test_monthly_sea_surface_temperature(tmp_path):
     header = "month,region 1+2,region 3,region 4,region 3.4"
     file = save(tmp_path / "s.csv", header, [months, *table[:, [2, 4, 6, 8]].T])
     report = run("--csv", file, "--horizon", 12, out=tmp_path)
-    periods = [unit["period"]["value"] for unit in report["units"]]
+    periods = [unit["observed_period"] for unit in report["units"]]
     for k in (0, 1, 3):  # region 4 has hardly a yearly cycle
         assert abs(periods[k] / 12 - 1) < 0.01
 

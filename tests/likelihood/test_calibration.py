@@ -42,6 +42,6 @@ def test_ninety_percent_intervals_cover_a_three_unit_ring(study, method, bias):
 def test_ranks_of_truths_from_the_prior_are_uniform(study):
     # Simulation-based calibration: Talts et al. 2018, arXiv 1804.06788. Of 14 parameters one falls
     # below 0.0005 with a probability of 0.7 percent.
-    rank, good = study["ranks"](400)
+    rank, good = study["ranks"](200)
     assert good.all()
     assert (study["uniformity"](rank) > 5e-4).all()
