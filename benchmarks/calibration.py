@@ -12,8 +12,9 @@ percent for the noise levels. Then what could be to blame where these are off: t
 approximation (cubature in place of linearisation; twice the likelihood ratio of the truth, whose
 mean is the number of parameters if the likelihood is right), or the sample size (with 4,000 samples
 a bias that fades with the sample size would halve in standard errors, one of the approximation
-doubles). Then whether the parametric bootstrap mends it, on a quarter of the recordings. Last, simulation-based calibration: ranks of the truth
-among draws from each posterior (cubature), where truths come from the prior; a chi-square test.
+doubles). Then whether the parametric bootstrap mends it, on a quarter of the recordings. Last,
+simulation-based calibration: ranks of the truth among draws from each posterior (cubature), where
+truths come from the prior; a chi-square test of uniformity.
 
 Coverage from 200 recordings has a standard error of 2 percent. `--quick` takes 40 recordings.
 """

@@ -57,12 +57,12 @@ def bootstrap(
         bias = mean x* - x,    corrected = x - bias
         interval = value(corrected -+ z sqrt(1 + 1/B) sd(x*)),    z the quantile of (1 + level) / 2
 
-    Maximum likelihood is biased in short recordings: the growth rate of a rhythm comes out too low
-    by some tenths of a standard error, since any fit takes part of the noise for rhythm lost. A
-    `laplace` interval is centred on the biased estimate; this one is not, and it needs neither a
-    parabola nor an exact likelihood, only that the model can be simulated. `sqrt(1 + 1/B)` pays
-    for the error of the estimated bias. Sound where bias and spread at the estimate are about
-    those at the truth; good with 20 refits or more. Costs `count` fits.
+    It sees whatever biases the whole estimator: few samples, and an approximate likelihood too (a
+    filter that linearises finds growth rates low by some tenths of a standard error), since the
+    refits meet recordings of the true model. A `laplace` interval is centred on the biased
+    estimate; this one is not, and it needs no parabola. `sqrt(1 + 1/B)` pays for the error of the
+    estimated bias. Sound where bias and spread at the estimate are about those at the truth; good
+    with 20 refits or more. Costs `count` fits.
 
     Arguments:
         simulate: `simulate(params, key) -> data`, with the recording's own times and gaps.
