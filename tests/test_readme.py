@@ -1,25 +1,44 @@
-"""The README's loop runs as printed and finds what it says."""
+"""The README's programs run as printed and find what it says."""
 
 import pathlib
 import re
+import runpy
 
 import jax
 import jax.numpy as jnp
 import numpy as np
 
 
-README = pathlib.Path(__file__).parents[1] / "README.md"
+ROOT = pathlib.Path(__file__).parents[1]
+LOOP, OWN_FIELD = re.findall(r"```python\n(.*?)```", (ROOT / "README.md").read_text(), re.DOTALL)
+
+
+def lines(text):
+    return [line for line in text.splitlines() if line.strip()]
 
 
 def test_loop_recovers_the_frequencies_within_forty_lines(capsys):
-    (block,) = re.findall(r"```python\n(.*?)```", README.read_text(), re.DOTALL)
-    assert len(block.splitlines()) <= 40
+    assert len(LOOP.splitlines()) <= 40
     namespace = {}
     with jax.numpy_dtype_promotion("standard"):  # optax's Adam mixes dtypes
-        exec(block, namespace)
+        exec(LOOP, namespace)
     fitted = namespace["constrain"](
         namespace["variables"][0], namespace["rules"], namespace["guess"]
     )
     np.testing.assert_allclose(fitted.frequency, jnp.array([6.3, 5.8]), atol=0.05)
     printed = np.fromstring(capsys.readouterr().out.strip("[]\n"), sep=" ")
     np.testing.assert_allclose(printed, fitted.frequency, rtol=1e-6)
+
+
+def test_field_of_ones_own_is_checked_and_fitted_within_forty_lines(capsys):
+    example = ROOT / "examples" / "own_field.py"
+    code = example.read_text().split('"""', 2)[2]
+    assert lines(OWN_FIELD) == lines(code)
+    assert len(lines(code)) <= 40
+    found = runpy.run_path(str(example))
+    known, truth = found["known"], found["truth"] | {"noise": 0.05, "reading": 0.05}
+    for name, value in truth.items():  # twice the width of a 90 percent interval
+        middle = (known.lower[name] + known.upper[name]) / 2
+        assert abs(value - middle) < known.upper[name] - known.lower[name]
+        assert known.upper[name] / known.lower[name] < 1.6
+    assert capsys.readouterr().out.count("converged") == 2

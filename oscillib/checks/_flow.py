@@ -66,20 +66,31 @@ def check_flow(
     rtol = _ROUNDINGS * float(jnp.finfo(y0.dtype).eps) if rtol is None else rtol
     results = _results(flow, part, params, y0, h)
     whole = results["whole"]
-    compare = lambda prop, got, expected, hint: _compare(prop, got, expected, rtol, hint)
-    compare("flow(0) is the identity", results["zero"], y0, "the flow moves in no time")
-    moved = "the flow has the wrong sign" if _opposite(results["starting"]) else "see `part`"
-    compare("derivative of the flow at h = 0", *results["starting"], moved)
-    compare(
-        "flow(h/2) twice is flow(h)",
-        results["twice"],
-        whole,
-        "an approximate step is no flow, nor is one of a part that depends on time",
-    )
-    compare("derivative of the flow at h", *results["arriving"], "the flow is not exact at `h`")
-    if backwards:
-        hint = "set `backwards=False` if the flow does not exist backwards in time"
-        compare("flow(-h) undoes flow(h)", results["back"], y0, hint)
+    starting, arriving = results["starting"], results["arriving"]
+    opposite = _opposite(*starting)
+    for prop, got, expected, hint in (
+        ("flow(0) is the identity", results["zero"], y0, "the flow moves in no time"),
+        (
+            "derivative of the flow at h = 0",
+            *starting,
+            "the flow has the wrong sign" if opposite else "is `part` all of what the flow solves?",
+        ),
+        (
+            "flow(h/2) twice is flow(h)",
+            results["twice"],
+            whole,
+            "an approximate step is no flow, nor is one of a part that depends on time",
+        ),
+        ("derivative of the flow at h", *arriving, "the flow is not exact at `h`"),
+        (
+            "flow(-h) undoes flow(h)",
+            results["back"] if backwards else y0,
+            y0,
+            "set `backwards=False` if the flow does not exist backwards in time",
+        ),
+    ):
+        size = float(np.max(np.abs(np.asarray(expected, float)), initial=0.0)) or 1.0
+        assert_close(prop, got, expected, rtol=0.0, atol=rtol * size, hint=hint)
 
 
 @eqx.filter_jit
@@ -99,14 +110,9 @@ def _results(flow: Any, part: Any, params: Any, y0: Array, h: Array) -> dict[str
     }
 
 
-def _opposite(pair: tuple[Array, Array]) -> bool:
-    got, expected = (np.asarray(x, float) for x in pair)
-    return bool(np.any(expected != 0)) and np.allclose(got, -expected, rtol=1e-3)
-
-
-def _compare(prop: str, got: Array, expected: Array, rtol: float, hint: str) -> None:
-    size = float(np.max(np.abs(np.asarray(expected, float)), initial=0.0))
-    assert_close(prop, got, expected, rtol=0.0, atol=rtol * (size or 1.0), hint=hint)
+def _opposite(got: Array, expected: Array) -> bool:
+    a, b = np.asarray(got, float), np.asarray(expected, float)
+    return bool(np.any(b != 0)) and np.allclose(a, -b, rtol=1e-3)
 
 
 def _same_as_state(prop: str, leaf: str, out: Any, y0: Array) -> None:

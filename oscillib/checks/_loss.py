@@ -11,7 +11,7 @@ from jaxtyping import Array, Bool, Float
 
 from .._validate import check_count, check_floating, check_shape
 from ._derivative import check_derivatives
-from ._failure import fail
+from ._failure import fail, named_leaves
 
 
 def check_mask(
@@ -26,8 +26,10 @@ def check_mask(
 
     They are set in turn to 0, NaN, both infinities, numbers so large that their squares overflow,
     and random numbers; value and gradient are compared as they are stored, and must be finite.
-    The gradient is taken in every floating-point array of `params`. One observed entry is changed
-    too, and must change the value: a loss that ignores its values would pass otherwise.
+    The gradient is taken in every floating-point array of `params`. All this under `jit`, and with
+    NaN outside it too: the compiler may turn a product with the mask into a choice, and hide a
+    leak that other code would show. One observed entry is changed as well, and must change value or
+    gradient: a loss that ignores its values would pass otherwise.
 
     Arguments:
         loss: `loss(params, values, mask) -> scalar`; bind what else it takes.
@@ -69,11 +71,13 @@ def check_mask(
         "random numbers": noise,
     }
     with_masked = lambda fill: jnp.where(mask, values, jnp.asarray(fill, values.dtype))
-    evaluate = lambda x: _value_and_gradient(loss, params, x, jnp.asarray(mask))
+    evaluate = lambda x: _compiled(loss, params, x, jnp.asarray(mask))
     first = evaluate(with_masked(0))
     _check_finite(first, "0")
     for name, fill in fills.items():
         _check_same(evaluate(with_masked(fill)), first, name)
+    plain = lambda fill: _evaluate(loss, params, with_masked(fill), jnp.asarray(mask))
+    _check_same(plain(jnp.nan), plain(0), "NaN (outside jit)")
     index = tuple(int(i) for i in np.argwhere(mask)[0])
     changed = evaluate(with_masked(0).at[index].add(1))
     if _bits(changed[0]) == _bits(first[0]) and all(
@@ -105,7 +109,7 @@ def check_minimum(
     along random directions `d`, each entry of which is as large as that parameter (1 where it is
     0); `g` and `H` are gradient and Hessian at `truth`. So `displacement` is how far the minimum
     may be from the truth, relative to the parameters. The gradient itself is checked beside the
-    truth by `check_derivatives`.
+    truth by `check_derivatives`, if the parameters are in float64.
 
     Arguments:
         loss: `loss(params) -> scalar`, with noise-free data of `truth` bound.
@@ -164,12 +168,17 @@ def check_minimum(
     beside = eqx.combine(
         jax.tree.map(lambda x, d: x + 0.03 * d, moving, _scaled_normal(scale, key_beside)), fixed
     )
-    check_derivatives(loss, beside, key=key_derivatives)
+    # Differences mean nothing in single precision.
+    if all(x.dtype == jnp.float64 for x in jax.tree.leaves(moving)):
+        compiled = eqx.filter_jit(loss)
+        check_derivatives(compiled, beside, key=key_derivatives, names=("params",))
 
 
-@eqx.filter_jit
-def _value_and_gradient(loss: Any, params: Any, values: Array, mask: Array) -> tuple[Array, Any]:
+def _evaluate(loss: Any, params: Any, values: Array, mask: Array) -> tuple[Array, Any]:
     return eqx.filter_value_and_grad(lambda p: _scalar(loss(p, values, mask)))(params)
+
+
+_compiled = eqx.filter_jit(_evaluate)
 
 
 @eqx.filter_jit
@@ -207,9 +216,7 @@ def _scaled_normal(scale: Any, key: Array) -> Any:
 
 
 def _named(tree: Any) -> list[tuple[str, np.ndarray]]:
-    """Return the arrays of a tree with the paths by which one finds them."""
-    paths = jax.tree_util.tree_leaves_with_path(tree)
-    return [(f"params{jax.tree_util.keystr(path)}", np.asarray(leaf)) for path, leaf in paths]
+    return [(name, np.asarray(leaf)) for name, leaf in named_leaves(tree, "params")]
 
 
 def _steepest(gradient: Any, scale: Any) -> tuple[str, tuple[int, ...], float]:

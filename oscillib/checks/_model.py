@@ -78,9 +78,9 @@ def check_recovery(
     count = check_count("count", count, least=2)
     params = jax.tree.map(jnp.asarray, params)
     keys = jax.random.split(key, count)
-    run = eqx.filter_jit(jax.vmap(lambda k: fit(simulate(params, k)))) if batched else None
-    pairs = run(keys) if run is not None else _one_by_one(simulate, fit, params, keys)
-    z, names = _standardised(*pairs, params, constraints)
+    run = _together if batched else _one_by_one
+    estimates, errors = run(simulate, fit, params, keys)
+    z, names = _standardised(estimates, errors, params, constraints)
     if not names:
         _wrong("something is fitted", None, "a standard error above 0", "none", "see `fit`")
     good = np.all(np.isfinite(z), axis=1)
@@ -264,6 +264,11 @@ def _check_ranks(
         hint,
         tuple(int(i) for i in np.unravel_index(worst, ranks.shape[1:])),
     )
+
+
+@eqx.filter_jit
+def _together(simulate: Any, fit: Any, params: Any, keys: Array) -> Any:
+    return jax.vmap(lambda key: fit(simulate(params, key)))(keys)
 
 
 def _one_by_one(simulate: Any, fit: Any, params: Any, keys: Array) -> Any:

@@ -12,7 +12,6 @@ from jaxtyping import Array, Float
 
 from .._validate import as_float, check_count, check_floating, check_same_dtype, check_shape
 from ..integrate import (
-    NoisyAdvance,
     NoisyParams,
     NoisyStep,
     linear_transition,
@@ -23,7 +22,7 @@ from ..integrate import (
     without_noise,
 )
 from ._failure import fail
-from ._step import Field, Scalar, State, check_step_output
+from ._step import Field, Scalar, State, check_step_output, is_noisy
 
 
 Rate = Callable[[Any], Float[Array, "size size"]]
@@ -103,8 +102,10 @@ def check_noise(
     check_shape("rate(params.noise)", q, (y0.size, y0.size), "(size, size)")
     if not np.any(np.asarray(q)):
         raise ValueError("`params.noise` must not be zero everywhere: there is nothing to check.")
-    _check_covariance(step, params, y0, h)
-    _check_one_step(step, field, params, y0, h, rate, rtol)
+    _check_kind(step, params, y0, h)
+    one = [np.asarray(x, float) for x in _one_step(step, field, rate, params, y0, h)]
+    _check_covariance(one[0], float(jnp.finfo(y0.dtype).eps))
+    _check_one_step(*one[1:], rtol)
     # Draws that do not depend on those of the step, or the two would err together.
     ours, theirs = (jax.random.split(k, paths) for k in jax.random.split(key))
     got = _ends(step, params, y0, h, steps, ours)
@@ -112,45 +113,48 @@ def check_noise(
     _check_moments(np.asarray(got, float), np.asarray(true, float), rtol, alarm)
 
 
-def _check_covariance(step: NoisyStep, params: NoisyParams, y0: Array, h: Array) -> None:
-    advance = step(params, h)
-    if not isinstance(advance, NoisyAdvance):
-        got = type(advance).__name__
-        _fault("kind of step", None, "a `NoisyAdvance`", got, "`split_noise(step)` makes one")
+def _check_kind(step: NoisyStep, params: NoisyParams, y0: Array, h: Array) -> None:
+    if not is_noisy(step, params, h):
+        _fault("kind of step", None, "a `NoisyAdvance`", "none", "`split_noise(step)` makes one")
     check_step_output(without_noise(step), params, y0, h)
-    covariance = jnp.asarray(advance.covariance)
+    covariance = jax.eval_shape(lambda k: jnp.asarray(step(params, k).covariance), h)
     expected = f"{(y0.size, y0.size)} {y0.dtype}"
     got = f"{covariance.shape} {covariance.dtype}"
     if got != expected:
         hint = "one row and column for each entry of the flattened state"
         _fault("shape and dtype of the covariance", None, expected, got, hint)
-    c = np.asarray(covariance, float)
+
+
+def _check_covariance(c: np.ndarray, eps: float) -> None:
     if not np.all(np.isfinite(c)):
         index = tuple(int(i) for i in np.argwhere(~np.isfinite(c))[0])
         _fault("finite covariance", index, "a finite number", c[index], "check the noise level")
-    rounding = 100 * float(jnp.finfo(y0.dtype).eps) * float(np.max(np.abs(c)))
+    rounding = 100 * eps * float(np.max(np.abs(c)))
     if np.max(np.abs(c - c.T)) > rounding:
         index = _worst(c - c.T)
         got = f"{c[index]:.6g} and {c.T[index]:.6g}"
         _fault("symmetry of the covariance", index, "C_ij = C_ji", got, "return (C + C') / 2")
     least = float(np.min(np.linalg.eigvalsh(c)))
-    if least < -y0.size * rounding:
+    if least < -len(c) * rounding:
         hint = "a covariance is a sum of squares L L'"
         _fault("covariance has no negative eigenvalue", None, ">= 0", f"{least:.6g}", hint)
 
 
 def _check_one_step(
-    step: Any, field: Any, params: Any, y0: Array, h: Array, rate: Rate, rtol: float
+    q: np.ndarray,
+    exact: np.ndarray,
+    whole: np.ndarray,
+    short: np.ndarray,
+    shorter: np.ndarray,
+    length: np.ndarray,
+    rtol: float,
 ) -> None:
-    q, exact, whole, short, shorter = (
-        np.asarray(x, float) for x in _one_step(step, field, rate, params, y0, h)
-    )
     total = np.trace(short)
     if total > 0:
         power = math.log2(total / max(float(np.trace(shorter)), total * 1e-9))
         if abs(power - 1) > 0.1:
             hint = "noise is added with variance proportional to h, amplitude to sqrt(h)"
-            got = f"trace like h^{power:.2f} for short steps"
+            got = f"trace like h^{round(power, 2) + 0.0:.2f} for short steps"
             _fault("covariance grows like h", None, "a trace that grows like h^1", got, hint)
     size = np.sqrt(np.outer(np.diag(exact), np.diag(exact)))
     # An entry without variance must have none, to rounding.
@@ -161,15 +165,15 @@ def _check_one_step(
     index = _worst(np.where(excess > 0, (whole - exact) / allowed, 0))
     got = f"{whole[index]:.6g}"
     expected = f"{exact[index]:.6g}, within {allowed[index]:.3g}"
-    _fault(
-        "covariance of one step", index, expected, got, _hint(short / (float(h) * _SHORT), q, rtol)
-    )
+    # Of a short step, in which only the noise itself counts.
+    _fault("covariance of one step", index, expected, got, _hint(short / length, q, rtol))
 
 
 @eqx.filter_jit
 def _one_step(
     step: Any, field: Any, rate: Rate, params: Any, y0: Array, h: Array
 ) -> tuple[Array, ...]:
+    """Return covariances: as declared, Q, exact, added in a step and in short ones; a length."""
     t = jnp.zeros_like(h)
 
     def added(h):
@@ -177,13 +181,14 @@ def _one_step(
         middle = advance.into_noise(t, y0)
         flat = lambda y: advance.after(t, y.reshape(y0.shape)).reshape(-1)
         entry = jax.jacfwd(flat)(middle.reshape(-1))
-        return entry @ advance.covariance @ entry.T
+        return advance.covariance, entry @ advance.covariance @ entry.T
 
     flat = lambda y: field(t, y.reshape(y0.shape), params.field).reshape(-1)
     matrix, q = jax.jacfwd(flat)(y0.reshape(-1)), rate(params.noise)
     _, exact = linear_transition(matrix, q, h)
-    whole, short, shorter = jax.vmap(added)(h * jnp.array([1, _SHORT, _SHORT / 2], h.dtype))
-    return q, exact, whole, short, shorter
+    lengths = h * jnp.array([1, _SHORT, _SHORT / 2], h.dtype)
+    declared, (whole, short, shorter) = jax.vmap(added)(lengths)
+    return declared[0], q, exact, whole, short, shorter, lengths[1]
 
 
 @eqx.filter_jit
@@ -258,4 +263,5 @@ def _worst(x: np.ndarray) -> tuple[int, ...]:
 
 
 def _fault(prop: str, index: Any, expected: Any, got: Any, hint: str) -> None:
-    fail(prop, leaf="NoisyAdvance", index=index, expected=expected, got=got, hint=hint)
+    leaf = "states" if "paths" in prop else "NoisyAdvance.covariance"
+    fail(prop, leaf=leaf, index=index, expected=expected, got=got, hint=hint)

@@ -1,5 +1,6 @@
 """Steps: the order that one has, and its agreement with error-controlled integration."""
 
+import itertools
 import math
 from collections.abc import Callable
 from typing import Any
@@ -12,8 +13,8 @@ from jax import lax
 from jaxtyping import Array, Float
 
 from .._validate import as_float, check_count, check_floating, check_same_dtype, check_shape
-from ..integrate import adaptive_rollout
-from ._failure import assert_close, fail
+from ..integrate import NoisyAdvance, adaptive_rollout
+from ._failure import fail
 
 
 Step = Callable[[Any, Any], Callable[[Any, Any], Any]]
@@ -90,8 +91,8 @@ def check_order(
     truth = _truth(field, params, y0, times, exact)[1:]
     size = np.sqrt(np.mean(truth**2))
     counts = 2 ** np.arange(halvings + 1)
-    path = lambda n: np.asarray(_path(step, params, y0, h, t0, jnp.asarray(n), steps), float)
-    errors = np.array([np.sqrt(np.mean((path(n) - truth) ** 2)) for n in counts]) / (size or 1.0)
+    paths = [_path(step, params, y0, h, t0, int(n), steps) for n in counts]
+    errors = np.array([np.sqrt(np.mean((p - truth) ** 2)) for p in paths]) / (size or 1.0)
     sizes = float(h) / counts
     if not np.all(np.isfinite(errors)):
         k = int(np.argmax(~np.isfinite(errors)))
@@ -178,16 +179,18 @@ def check_agreement(
     check_step_output(step, params, y0, h)
     times = t0 + h * jnp.arange(steps + 1).astype(y0.dtype)
     truth = _truth(field, params, y0, times, None)
-    path = _path(step, params, y0, h, t0, jnp.asarray(1), steps)
-    got = np.concatenate([np.asarray(y0)[None], np.asarray(path)])
+    path = _path(step, params, y0, h, t0, 1, steps)
+    got = np.concatenate([np.asarray(y0, float)[None], path])
     bound = rtol * np.max(np.abs(truth)) + atol
-    if not np.all(np.abs(got - truth) <= bound):
-        assert_close(
+    error = np.nan_to_num(np.abs(got - truth), nan=np.inf)
+    if np.max(error) > bound:
+        index = tuple(int(i) for i in np.unravel_index(np.argmax(error), error.shape))
+        fail(
             "agreement with error-controlled integration",
-            got,
-            truth,
-            rtol=0.0,
-            atol=float(bound),
+            leaf="states",
+            index=index,
+            expected=f"{truth[index]:.6g} within {bound:.1g}",
+            got=f"{got[index]:.6g}",
             hint=_step_hint(step, field, params, y0, h, t0),
         )
 
@@ -205,6 +208,13 @@ def check_step_output(step: Step, params: Any, y0: Array, h: Array) -> None:
             got=got,
             hint="build state, parameters and constants in one precision; broadcast nothing",
         )
+
+
+def is_noisy(step: Any, params: Any, h: Array) -> bool:
+    """Tell whether a step returns a `NoisyAdvance`, without computing anything."""
+    kinds = []
+    jax.eval_shape(lambda k: kinds.append(isinstance(step(params, k), NoisyAdvance)), h)
+    return kinds[0]
 
 
 def _arrays(y0: Any, h: Any, t0: Any) -> tuple[Array, Array, Array]:
@@ -227,43 +237,54 @@ def _tolerance(dtype: Any) -> float:
 def _truth(field: Field, params: Any, y0: Array, times: Array, exact: Any) -> np.ndarray:
     if exact is not None:
         return np.stack([np.asarray(exact(t)).reshape(y0.shape) for t in times]).astype(float)
-    states, success = _reference(field, params, y0, times)
-    if not bool(success):
-        fail(
-            "error-controlled integration",
-            leaf="states",
-            index=None,
-            expected="that `adaptive_rollout` reaches the end with finite states",
-            got="no success",
-            hint="check the field and its start, or take a shorter time",
-        )
-    return np.asarray(states, float)
+    states = [y0]
+    for start, end in itertools.pairwise(times):
+        y, success = _reference(field, params, states[-1], jnp.stack([start, end]))
+        if not bool(success):
+            fail(
+                "error-controlled integration",
+                leaf="states",
+                index=(len(states),),
+                expected="that `adaptive_rollout` reaches the end with finite states",
+                got=f"no success before time {float(end):.4g}",
+                hint="check the field and its start, or take a shorter time",
+            )
+        states.append(y)
+    return np.asarray(jnp.stack(states), float)
 
 
-# Compiled once for each field and shape: most of a check is compilation.
-@eqx.filter_jit
-def _reference(field: Field, params: Any, y0: Array, times: Array) -> tuple[Array, Array]:
-    tolerance = _tolerance(y0.dtype)
-    out = adaptive_rollout(field, params, y0, times, rtol=tolerance, atol=tolerance)
-    return out.states, out.success
-
-
-@eqx.filter_jit
 def _path(
-    step: Step, params: Any, y0: Array, h: Array, t0: Array, substeps: Array, steps: int
+    step: Step, params: Any, y0: Array, h: Array, t0: Array, substeps: int, steps: int
+) -> np.ndarray:
+    """Return states after each `h`, itself taken in `substeps` steps."""
+    y, states, count = y0, [], jnp.asarray(substeps)
+    for k in range(steps):
+        y = _sample(step, params, y, h, t0, count, jnp.asarray(k))
+        states.append(np.asarray(y, float))
+    return np.stack(states)
+
+
+# Both are compiled once for each field or step and shape, however many samples and step sizes
+# there are: most of a check is compilation.
+@eqx.filter_jit
+def _reference(field: Field, params: Any, y: Array, times: Array) -> tuple[Array, Array]:
+    tolerance = _tolerance(y.dtype)
+    out = adaptive_rollout(field, params, y, times, rtol=tolerance, atol=tolerance)
+    return out.states[-1], out.success
+
+
+@eqx.filter_jit
+def _sample(
+    step: Step, params: Any, y: Array, h: Array, t0: Array, substeps: Array, k: Array
 ) -> Array:
-    """Return states after each `h`, taken in `substeps` steps: a traced number, so one compile."""
     small = h / substeps.astype(h.dtype)
     advance = step(params, small)
 
-    def sample(y, k):
-        def one(j, y):
-            return advance(t0 + small * (k * substeps + j).astype(h.dtype), y)
+    def one(j, y):
+        # From the count, not from a sum: late steps lose no digits of their time.
+        return advance(t0 + small * (k * substeps + j).astype(h.dtype), y)
 
-        y = lax.fori_loop(0, substeps, one, y)
-        return y, y
-
-    return lax.scan(sample, y0, jnp.arange(steps))[1]
+    return lax.fori_loop(0, substeps, one, y)
 
 
 def _order_hint(observed: float, order: int | float) -> str:

@@ -1,0 +1,315 @@
+"""Vector fields as functions: what any field must be, whatever its equation."""
+
+import dataclasses
+from collections.abc import Callable
+from typing import Any
+
+import jax
+import jax.numpy as jnp
+import numpy as np
+from jaxtyping import Array, Float
+
+from ._derivative import check_derivatives
+from ._failure import assert_close, fail, named_leaves, same_type
+
+
+Field = Callable[[Any, Any, Any], Any]
+State = Float[Array, "*state"]
+Time = Float[Array, ""] | float
+
+_ORDER = "A field takes (t, y, params), in this order."
+
+
+def check_output(field: Field, params: Any, y0: State, *, t: Time = 0.0) -> None:
+    """Check that `dy` has exactly the shape and dtype of `y`, in both precisions.
+
+    Arguments:
+        field: `field(t, y, params) -> dy`.
+        params: its parameters.
+        y0: a state, shape `(*state)`.
+        t: time, default 0.
+
+    Raises:
+        AssertionError: shape or dtype differ, or a number of another precision is mixed in.
+
+    Example:
+        >>> import jax.numpy as jnp
+        >>> from oscillib.checks import check_output
+        >>> check_output(lambda t, y, rate: -rate * y, jnp.asarray(2.0), jnp.ones(3))
+
+    Source: common practice, no source.
+    """
+    __tracebackhide__ = True
+    prop = "output of the field"
+    for dtype in (jnp.float64, jnp.float32) if _double(y0) else (y0.dtype,):
+        time, y, p = (cast(x, dtype) for x in (jnp.asarray(t, y0.dtype), y0, params))
+        dy = jax.eval_shape(field, time, y, p)
+        if not hasattr(dy, "shape"):
+            fail(prop, expected="one array", got=f"a {type(dy).__name__}", hint=_ORDER)
+        same_type(prop, "dy", dy, y, _swapped(field, time, y, p))
+        stranger = _other_precision(jax.make_jaxpr(field)(time, y, p).jaxpr, y.dtype)
+        if stranger:
+            fail(
+                prop, leaf="inside", expected=f"{y.dtype} throughout", got=stranger,
+                hint="a constant of fixed precision? Write it as a plain Python number.",
+            )  # fmt: skip
+
+
+def _swapped(field: Field, t: Any, y: Any, params: Any) -> str:
+    """Say whether another order of the arguments gives the right shape."""
+    for name, order in {"(y, t, params)": (y, t, params), "(t, params, y)": (t, params, y)}.items():
+        try:
+            out = jax.eval_shape(field, *order)
+        except Exception:
+            continue
+        if getattr(out, "shape", None) == y.shape:
+            return f"{_ORDER} This one gives the right shape when called with {name}."
+    return f"{_ORDER} Nothing may be broadcast or left out."
+
+
+def _other_precision(jaxpr: Any, dtype: Any) -> str:
+    """Name the first floating array of another precision inside a traced function."""
+    for x in (*jaxpr.constvars, *jaxpr.invars, *(v for e in jaxpr.eqns for v in e.outvars)):
+        other = getattr(x.aval, "dtype", dtype)
+        if jnp.issubdtype(other, jnp.floating) and other != dtype:
+            return f"an array of {other}, shape {x.aval.shape}"
+    for equation in jaxpr.eqns:
+        for inner in jax.tree.leaves(equation.params, is_leaf=lambda x: hasattr(x, "eqns")):
+            inner = getattr(inner, "jaxpr", inner)
+            found = _other_precision(inner, dtype) if hasattr(inner, "eqns") else ""
+            if found:
+                return found
+    return ""
+
+
+def check_purity(field: Field, params: Any, y0: State, *, t: Time = 0.0) -> None:
+    """Check that a field depends on its arguments alone, and may be compiled.
+
+    Two calls must agree to the bit, a compiled call must agree with a plain one to rounding, and
+    another compiled call with other values too: a decision of Python on a value, hidden state and
+    hidden randomness are caught.
+
+    Arguments:
+        field: `field(t, y, params) -> dy`.
+        params: its parameters.
+        y0: a state, shape `(*state)`.
+        t: time, default 0.
+
+    Raises:
+        AssertionError: calls disagree, or the field cannot be compiled.
+
+    Example:
+        >>> import jax.numpy as jnp
+        >>> from oscillib.checks import check_purity
+        >>> check_purity(lambda t, y, rate: -rate * y, jnp.asarray(2.0), jnp.ones(3))
+
+    Source: common practice, no source.
+    """
+    __tracebackhide__ = True
+    prop, time = "purity of the field", jnp.asarray(t, y0.dtype)
+    compiled = jax.jit(field)
+    for y in (y0, 1.5 * y0 + 0.1, y0):
+        first, second = field(time, y, params), field(time, y, params)
+        hint = "hidden state or hidden randomness: all that it depends on must be an argument."
+        assert_close(prop, second, first, rtol=0, atol=0, hint=hint)
+        try:
+            dy = compiled(time, y, params)
+        except jax.errors.JAXTypeError as problem:
+            fail(
+                prop, expected="a function that can be compiled",
+                got=f"{type(problem).__name__}: {str(problem).splitlines()[0]}",
+                hint="a Python `if`, `while`, `float()` or numpy call on a value? Use `jnp.where` "
+                "and `jax.numpy`.",
+            )  # fmt: skip
+        rounding = 1e3 * float(jnp.finfo(y.dtype).eps)
+        size = float(jnp.max(jnp.abs(first)))
+        hint = "a decision or a number is fixed when the function is traced."
+        assert_close(f"{prop} under jit", dy, first, rtol=rounding, atol=rounding * size, hint=hint)
+
+
+def check_batch(field: Field, params: Any, y0: State, *, key: Array, t: Time = 0.0) -> None:
+    """Check that `vmap` over states equals a loop over them.
+
+    Arguments:
+        field: `field(t, y, params) -> dy`.
+        params: its parameters.
+        y0: a state, shape `(*state)`.
+        key: random key of the states around it.
+        t: time, default 0.
+
+    Raises:
+        AssertionError: they differ by more than rounding.
+
+    Example:
+        >>> import jax
+        >>> import jax.numpy as jnp
+        >>> from oscillib.checks import check_batch
+        >>> check_batch(lambda t, y, k: -k * y, jnp.asarray(2.0), jnp.ones(3),
+        ...             key=jax.random.key(0))
+
+    Source: common practice, no source.
+    """
+    __tracebackhide__ = True
+    time = jnp.asarray(t, y0.dtype)
+    ys = y0[None] + 0.3 * jax.random.normal(key, (3, *y0.shape), y0.dtype)
+    together = jax.vmap(lambda y: field(time, y, params))(ys)
+    alone = jnp.stack([field(time, y, params) for y in ys])
+    rounding = 1e3 * float(jnp.finfo(y0.dtype).eps)
+    size = float(jnp.max(jnp.abs(alone)))
+    hint = "entries of different states are mixed."
+    prop = "batch of states under vmap"
+    assert_close(prop, together, alone, rtol=rounding, atol=rounding * size, hint=hint)
+
+
+def check_traces_once(field: Field, params: Any, y0: State, *, t: Time = 0.0) -> None:
+    """Check that new values of time, state and parameters do not compile the field anew.
+
+    Arguments:
+        field: `field(t, y, params) -> dy`.
+        params: its parameters.
+        y0: a state, shape `(*state)`.
+        t: time, default 0.
+
+    Raises:
+        AssertionError: it is traced again, or a number is kept where no value can be changed: in a
+            static field of a module.
+
+    Example:
+        >>> import jax.numpy as jnp
+        >>> from oscillib.checks import check_traces_once
+        >>> check_traces_once(lambda t, y, rate: -rate * y, jnp.asarray(2.0), jnp.ones(3))
+
+    Source: common practice, no source.
+    """
+    __tracebackhide__ = True
+    prop = "one trace for all values"
+    for name in _static_numbers(params):
+        fail(
+            prop, leaf=f"params{name}", expected="an array", got="a number in a static field",
+            hint="every new value would compile anew, and it gets no gradient: convert it to an "
+            "array.",
+        )  # fmt: skip
+    count = 0
+
+    def counted(t, y, params):
+        nonlocal count
+        count += 1
+        return field(t, y, params)
+
+    compiled = jax.jit(counted)
+    for scale in (1.0, 1.1, 0.9):
+        other = jax.tree.map(lambda x, s=scale: x * s if _floats(x) else x, params)
+        compiled(jnp.asarray(scale * t, y0.dtype), scale * y0, other)
+    if count > 1:
+        fail(prop, expected="1 trace", got=f"{count}", hint="arrays whose shape or dtype changes?")
+
+
+def _static_numbers(tree: Any, name: str = "") -> list[str]:
+    """Name every float in a static field of a module, wherever in the tree."""
+    if not dataclasses.is_dataclass(tree) or isinstance(tree, type):
+        nodes = jax.tree.leaves(tree, is_leaf=dataclasses.is_dataclass)
+        inner = [x for x in nodes if dataclasses.is_dataclass(x) and x is not tree]
+        return [found for x in inner for found in _static_numbers(x, name)]
+    found = []
+    for field in dataclasses.fields(tree):
+        value, place = getattr(tree, field.name, None), f"{name}.{field.name}"
+        if field.metadata.get("static") and isinstance(value, float):
+            found.append(place)
+        elif not field.metadata.get("static"):
+            found += _static_numbers(value, place)
+    return found
+
+
+def check_gradients(
+    field: Field,
+    params: Any,
+    y0: State,
+    *,
+    key: Array,
+    t: Time = 0.0,
+    states: tuple[State, ...] | list[State] = (),
+    unused: tuple[str, ...] = (),
+) -> None:
+    """Check the derivatives of a field by its state and by every leaf of its parameters.
+
+    At `y0` forward mode, reverse mode and central differences must agree. There, at the origin and
+    at `states` all derivatives must be finite: a square root or an angle at rest is the usual way
+    to lose them. Needs 64-bit floats.
+
+    Arguments:
+        field: `field(t, y, params) -> dy`.
+        params: its parameters.
+        y0: a state away from kinks, shape `(*state)`.
+        key: random key of the directions.
+        t: time, default 0.
+        states: further states at which derivatives must be finite, such as states of rest.
+        unused: names of parameters, as in messages (`params.gain`), that need not move anything.
+
+    Raises:
+        AssertionError: derivatives disagree, are not finite, or a parameter moves nothing.
+        TypeError: not in 64-bit floats.
+
+    Example:
+        >>> import jax
+        >>> import jax.numpy as jnp
+        >>> from oscillib.checks import check_gradients
+        >>> check_gradients(lambda t, y, rate: -rate * y, jnp.asarray(2.0), jnp.ones(3),
+        ...                 key=jax.random.key(0))
+
+    Source: common practice, no source.
+    """
+    __tracebackhide__ = True
+    time = jnp.asarray(t, y0.dtype)
+    slopes = jax.jit(jax.jacfwd(lambda y, p: field(time, y, p), argnums=(0, 1)))
+    places = {"`y0`": y0, "the origin": jnp.zeros_like(y0)}
+    places |= {f"`states[{i}]`": jnp.asarray(state) for i, state in enumerate(states)}
+    if all(_floats(leaf) for leaf in jax.tree.leaves(params)):
+        for place, y in places.items():
+            for name, leaf in zip(("y", "params"), slopes(y, params), strict=True):
+                _finite(f"derivative at {place}", named_leaves(leaf, name))
+    check_derivatives(lambda y: field(time, y, params), y0, key=key, names=("y",), must_move=False)
+    for k, (name, leaf) in enumerate(named_leaves(params, "params")):
+        if not _floats(leaf):
+            continue
+
+        def by_leaf(x: Any, k: int = k) -> Any:
+            leaves, structure = jax.tree.flatten(params)
+            return field(
+                time, y0, jax.tree.unflatten(structure, [*leaves[:k], x, *leaves[k + 1 :]])
+            )
+
+        check_derivatives(
+            by_leaf, leaf, key=jax.random.fold_in(key, k), names=(name,),
+            must_move=name not in unused and bool(np.size(leaf)),
+        )  # fmt: skip
+
+
+def _finite(prop: str, leaves: list[tuple[str, Any]]) -> None:
+    __tracebackhide__ = True
+    for name, leaf in leaves:
+        bad = np.argwhere(~np.isfinite(np.asarray(leaf)))
+        if len(bad):
+            index = tuple(int(i) for i in bad[0])
+            got = np.asarray(leaf)[index]
+            fail(
+                prop, leaf=f"by {name}", index=index, expected="a finite number", got=got,
+                hint="a root, norm, angle or division at zero? Replace its argument before it, by "
+                "`jnp.where`, or write it without.",
+            )  # fmt: skip
+
+
+def cast(tree: Any, dtype: Any) -> Any:
+    """Convert floating leaves."""
+    return jax.tree.map(lambda x: jnp.asarray(x, dtype) if _floats(x) else x, tree)
+
+
+def _floats(x: Any) -> bool:
+    return jnp.issubdtype(jnp.result_type(x), jnp.floating) if _numeric(x) else False
+
+
+def _numeric(x: Any) -> bool:
+    return isinstance(x, (float, int, np.ndarray, np.generic, jax.Array))
+
+
+def _double(y: Any) -> bool:
+    return jnp.asarray(y).dtype == jnp.float64
