@@ -20,6 +20,7 @@ def pushed(t, y, params):
 
 PUSH = jnp.asarray(1.5)
 PUSHED_START = jnp.array([0.7, 0.0])
+RK4_PUSHED = rk4(pushed)
 
 # Orders: Hairer, Norsett & Wanner, Solving ODEs I; Strang 1968; Suzuki 1990 (from memory).
 STEPS = {
@@ -49,8 +50,8 @@ def test_noisy_step_without_noise_has_order_2():
 
 
 def test_field_that_depends_on_time():
-    check_order(rk4(pushed), pushed, PUSH, PUSHED_START, order=4, h=0.3, t0=0.7)
-    check_agreement(rk4(pushed), pushed, PUSH, PUSHED_START, 0.1, 16, rtol=1e-5, t0=0.7)
+    check_order(RK4_PUSHED, pushed, PUSH, PUSHED_START, order=4, h=0.3, t0=0.7)
+    check_agreement(RK4_PUSHED, pushed, PUSH, PUSHED_START, 0.1, 16, rtol=1e-5, t0=0.7)
 
 
 def test_exact_solution_stands_in_for_the_reference():
@@ -61,26 +62,24 @@ def test_exact_solution_stands_in_for_the_reference():
 
 
 def test_higher_order_passes_only_on_demand():
-    check_order(rk4(pushed), pushed, PUSH, PUSHED_START, order=2, h=0.3, at_least=True)
+    check_order(RK4_PUSHED, pushed, PUSH, PUSHED_START, order=2, h=0.3, at_least=True)
     with pytest.raises(AssertionError, match="claimed order 2"):
-        check_order(rk4(pushed), pushed, PUSH, PUSHED_START, order=2, h=0.3)
+        check_order(RK4_PUSHED, pushed, PUSH, PUSHED_START, order=2, h=0.3)
 
 
 def test_an_exact_step_shows_no_order():
-    unit = HopfParams([0.4], [3.0])
+    units = HopfParams([0.4, -0.2], [3.0, 4.0])
     exact = lambda params, h: lambda t, y: FIELD.unit_flow(params, h)(y)
-    start = jnp.array([[0.8], [0.2]])
     with pytest.raises(AssertionError, match="at rounding level, so that no order can be seen"):
-        check_order(exact, FIELD, unit, start, order=2, h=0.2)
-    check_agreement(exact, FIELD, unit, start, 0.2, 8, rtol=1e-9)
+        check_order(exact, FIELD, units, START, order=2, h=0.2)
+    check_agreement(exact, FIELD, units, START, 0.2, 8, rtol=1e-9)
 
 
 def test_blow_up_is_named():
-    step = heun(lambda t, y, params: params * y**3)
+    explode = lambda t, y, params: params * y**3
+    options = {"order": 2, "h": 1.0, "exact": lambda t: jnp.full(2, jnp.exp(-t))}
     with pytest.raises(AssertionError, match="not finite at step size 1"):
-        check_order(
-            step, lambda t, y, params: -y, jnp.asarray(9.0), jnp.full(1, 9.0), order=2, h=1.0
-        )
+        check_order(heun(explode), explode, jnp.asarray(9.0), jnp.full(2, 9.0), **options)
 
 
 def test_reference_that_fails_is_named():
@@ -91,9 +90,9 @@ def test_reference_that_fails_is_named():
 
 def test_single_precision():
     single = lambda tree: jax.tree.map(lambda x: x.astype(jnp.float32), tree)
-    params, start = single(PUSH), single(PUSHED_START)
-    check_order(heun(pushed), pushed, params, start, order=2, h=0.4, halvings=3)
-    check_agreement(rk4(pushed), pushed, params, start, 0.1, 8, rtol=1e-4)
+    params, start, step = single(PUSH), single(PUSHED_START), heun(pushed)
+    check_order(step, pushed, params, start, order=2, h=0.4, halvings=3)
+    check_agreement(step, pushed, params, start, 0.05, 8, rtol=1e-2)
 
 
 def test_misuse(user_errors):
