@@ -13,7 +13,8 @@ jax.config.update("jax_numpy_dtype_promotion", "strict")
 
 
 def pytest_configure(config):
-    """Keep what is compiled: most of a run is compilation, and the workers share some of it."""
+    """Load our own plugin, late enough; keep what is compiled: it is most of a run."""
+    config.pluginmanager.import_plugin("oscillib._pytest")
     jax.config.update("jax_compilation_cache_dir", str(config.cache.mkdir("compiled")))
     jax.config.update("jax_persistent_cache_min_compile_time_secs", 0)
     jax.config.update("jax_persistent_cache_min_entry_size_bytes", -1)
