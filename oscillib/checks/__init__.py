@@ -22,6 +22,7 @@ from ._flow import check_flow as check_flow
 from ._loss import check_mask as check_mask, check_minimum as check_minimum
 from ._model import check_calibration as check_calibration, check_recovery as check_recovery
 from ._noise import check_noise as check_noise
+from ._problems import Problem as Problem, problems as problems
 from ._readout import check_readout as check_readout
 from ._report import Finding as Finding, Report as Report
 from ._stability import check_stability as check_stability, check_step_bias as check_step_bias
