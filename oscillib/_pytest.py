@@ -29,8 +29,7 @@ def field_check(request):
 
     from oscillib.checks import check_field
 
-    marker = request.node.get_closest_marker("oscillib_seed")
-    seed = marker.args[0] if marker else zlib.crc32(request.node.name.encode())
+    seed = _seed(request.node)
 
     def run(field, params, y0, **claims):
         __tracebackhide__ = True
@@ -39,3 +38,16 @@ def field_check(request):
         return report
 
     return run
+
+
+def _seed(node) -> int:
+    """Return the seed that the marker sets, else one made from the name of the test."""
+    marker = node.get_closest_marker("oscillib_seed")
+    if marker is None:
+        return zlib.crc32(node.nodeid.encode())
+    if len(marker.args) != 1 or marker.kwargs or not isinstance(marker.args[0], int):
+        raise pytest.UsageError(
+            f"`oscillib_seed` takes one whole number, as in `oscillib_seed(3)`; {node.nodeid} "
+            f"has {marker.args} {marker.kwargs or ''}".rstrip()
+        )
+    return marker.args[0]
