@@ -61,7 +61,7 @@ def check_mask(
     if mask.all() or not mask.any():
         raise ValueError("`mask` must hold observed and masked entries; got only one of them.")
     huge = float(jnp.finfo(values.dtype).max) / 4
-    noise = jax.random.normal(key, values.shape, values.dtype)
+    noise = generator(key).normal(size=values.shape)
     fills = {
         "NaN": jnp.nan,
         "inf": jnp.inf,
@@ -131,11 +131,11 @@ def check_minimum(
         >>> check_minimum(loss, jnp.asarray(3.0), key=jax.random.key(0))
     """
     directions = check_count("directions", directions)
-    key_directions, key_beside, key_derivatives = jax.random.split(key, 3)
+    random = generator(key)
     moving, fixed = eqx.partition(truth, eqx.is_inexact_array)
-    scale = jax.tree.map(lambda x: jnp.where(x == 0, 1, jnp.abs(x)), moving)
-    draw = jax.vmap(lambda k: _scaled_normal(scale, k))
-    along = draw(jax.random.split(key_directions, directions))
+    scale = jax.tree.map(lambda x: np.where(np.asarray(x) == 0, 1, np.abs(x)), moving)
+    draw = lambda x, n: jnp.asarray(x * random.normal(size=(n, *x.shape)), x.dtype)
+    along = jax.tree.map(lambda x: draw(x, directions), scale)
     value, gradient, slopes, curvatures = _second_order(loss, moving, fixed, along)
     _check_finite((value, gradient), "noise-free data")
     slopes, curvatures = np.asarray(slopes, float), np.asarray(curvatures, float)
@@ -165,13 +165,12 @@ def check_minimum(
             got=f"{worst:.6g} (minimum {away[k]:.3g} of the parameters away, along direction {k})",
             hint="the data must be noise-free data of `truth`; look for an offset in the loss",
         )
-    beside = eqx.combine(
-        jax.tree.map(lambda x, d: x + 0.03 * d, moving, _scaled_normal(scale, key_beside)), fixed
-    )
+    moved = jax.tree.map(lambda x, size: x + 0.03 * draw(size, 1)[0], moving, scale)
+    beside = eqx.combine(moved, fixed)
     # Differences mean nothing in single precision.
     if all(x.dtype == jnp.float64 for x in jax.tree.leaves(moving)):
         compiled = eqx.filter_jit(loss)
-        check_derivatives(compiled, beside, key=key_derivatives, names=("params",))
+        check_derivatives(compiled, beside, key=jax.random.fold_in(key, 0), names=("params",))
 
 
 def _evaluate(loss: Any, params: Any, values: Array, mask: Array) -> tuple[Array, Any]:
@@ -179,6 +178,11 @@ def _evaluate(loss: Any, params: Any, values: Array, mask: Array) -> tuple[Array
 
 
 _compiled = eqx.filter_jit(_evaluate)
+
+
+def generator(key: Array) -> np.random.Generator:
+    """Return a generator of the host: draws of many shapes, with nothing to compile."""
+    return np.random.default_rng(np.asarray(jax.random.key_data(key)).ravel())
 
 
 @eqx.filter_jit
@@ -204,15 +208,6 @@ def _scalar(value: Any) -> Array:
 def _inner(a: Any, b: Any) -> Array:
     parts = [jnp.sum(x * y) for x, y in zip(jax.tree.leaves(a), jax.tree.leaves(b), strict=True)]
     return sum(parts[1:], parts[0])
-
-
-def _scaled_normal(scale: Any, key: Array) -> Any:
-    leaves, structure = jax.tree.flatten(scale)
-    keys = jax.random.split(key, len(leaves))
-    pairs = zip(leaves, keys, strict=True)
-    return jax.tree.unflatten(
-        structure, [x * jax.random.normal(k, x.shape, x.dtype) for x, k in pairs]
-    )
 
 
 def _named(tree: Any) -> list[tuple[str, np.ndarray]]:

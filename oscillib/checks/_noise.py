@@ -103,13 +103,16 @@ def check_noise(
     if not np.any(np.asarray(q)):
         raise ValueError("`params.noise` must not be zero everywhere: there is nothing to check.")
     _check_kind(step, params, y0, h)
-    one = [np.asarray(x, float) for x in _one_step(step, field, rate, params, y0, h)]
-    _check_covariance(one[0], float(jnp.finfo(y0.dtype).eps))
-    _check_one_step(*one[1:], rtol)
+    lengths = h * jnp.array([1, _SHORT, _SHORT / 2], h.dtype)
+    out = _one_step(step, params, y0, lengths)
+    declared, added = np.asarray(out[0], float), np.asarray(out[1], float)
+    _check_covariance(declared[0], float(jnp.finfo(y0.dtype).eps))
+    exact = np.asarray(_exact(field, rate, params, y0, h), float)
+    _check_one_step(added, exact, np.asarray(q * lengths[1], float), rtol)
     # Draws that do not depend on those of the step, or the two would err together.
-    ours, theirs = (jax.random.split(k, paths) for k in jax.random.split(key))
-    got = _ends(step, params, y0, h, steps, ours)
-    true = _reference_ends(field, rate, params, y0, h / refine, steps * refine, theirs)
+    ours, theirs = jax.random.split(key)
+    got = _ends(step, params, y0, h, steps, ours, paths)
+    true = _reference_ends(field, rate, params, y0, h / refine, steps * refine, theirs, paths)
     _check_moments(np.asarray(got, float), np.asarray(true, float), rtol, alarm)
 
 
@@ -140,15 +143,9 @@ def _check_covariance(c: np.ndarray, eps: float) -> None:
         _fault("covariance has no negative eigenvalue", None, ">= 0", f"{least:.6g}", hint)
 
 
-def _check_one_step(
-    q: np.ndarray,
-    exact: np.ndarray,
-    whole: np.ndarray,
-    short: np.ndarray,
-    shorter: np.ndarray,
-    length: np.ndarray,
-    rtol: float,
-) -> None:
+def _check_one_step(added: np.ndarray, exact: np.ndarray, q: np.ndarray, rtol: float) -> None:
+    """Compare what steps of three lengths add; `q` is what the second must, so short it is."""
+    whole, short, shorter = added
     total = np.trace(short)
     if total > 0:
         power = math.log2(total / max(float(np.trace(shorter)), total * 1e-9))
@@ -166,44 +163,43 @@ def _check_one_step(
     got = f"{whole[index]:.6g}"
     expected = f"{exact[index]:.6g}, within {allowed[index]:.3g}"
     # Of a short step, in which only the noise itself counts.
-    _fault("covariance of one step", index, expected, got, _hint(short / length, q, rtol))
+    _fault("covariance of one step", index, expected, got, _hint(short, q, rtol))
 
 
 @eqx.filter_jit
-def _one_step(
-    step: Any, field: Any, rate: Rate, params: Any, y0: Array, h: Array
-) -> tuple[Array, ...]:
-    """Return covariances: as declared, Q, exact, added in a step and in short ones; a length."""
-    t = jnp.zeros_like(h)
+def _one_step(step: Any, params: Any, y0: Array, lengths: Array) -> tuple[Array, Array]:
+    """Return the covariance that a step of each length declares, and the one that it adds."""
 
-    def added(h):
-        advance = step(params, h)
+    def one(h):
+        advance, t = step(params, h), jnp.zeros_like(h)
         middle = advance.into_noise(t, y0)
         flat = lambda y: advance.after(t, y.reshape(y0.shape)).reshape(-1)
         entry = jax.jacfwd(flat)(middle.reshape(-1))
         return advance.covariance, entry @ advance.covariance @ entry.T
 
-    flat = lambda y: field(t, y.reshape(y0.shape), params.field).reshape(-1)
-    matrix, q = jax.jacfwd(flat)(y0.reshape(-1)), rate(params.noise)
-    _, exact = linear_transition(matrix, q, h)
-    lengths = h * jnp.array([1, _SHORT, _SHORT / 2], h.dtype)
-    declared, (whole, short, shorter) = jax.vmap(added)(lengths)
-    return declared[0], q, exact, whole, short, shorter, lengths[1]
+    return jax.vmap(one)(lengths)
 
 
 @eqx.filter_jit
-def _ends(step: Any, params: Any, y0: Array, h: Array, steps: int, keys: Array) -> Array:
+def _exact(field: Any, rate: Rate, params: Any, y0: Array, h: Array) -> Array:
+    flat = lambda y: field(jnp.zeros_like(h), y.reshape(y0.shape), params.field).reshape(-1)
+    matrix = jax.jacfwd(flat)(y0.reshape(-1))
+    return linear_transition(matrix, rate(params.noise), h)[1]
+
+
+@eqx.filter_jit
+def _ends(step: Any, params: Any, y0: Array, h: Array, steps: int, key: Array, paths: int) -> Array:
     """Return where the paths end, shape `(path, size)`."""
-    one = lambda key: noisy_rollout(step, params, y0, h, steps, key=key)[-1]
-    return jax.vmap(one)(keys).reshape(keys.shape[0], y0.size)
+    one = lambda k: noisy_rollout(step, params, y0, h, steps, key=k)[-1]
+    return jax.vmap(one)(jax.random.split(key, paths)).reshape(paths, y0.size)
 
 
 @eqx.filter_jit
 def _reference_ends(
-    field: Any, rate: Rate, params: Any, y0: Array, h: Array, steps: int, keys: Array
+    field: Any, rate: Rate, params: Any, y0: Array, h: Array, steps: int, key: Array, paths: int
 ) -> Array:
     # Made in here, so that a second check of the same field compiles nothing anew.
-    return _ends(split_noise(rk4(field), rate=rate), params, y0, h, steps, keys)
+    return _ends(split_noise(rk4(field), rate=rate), params, y0, h, steps, key, paths)
 
 
 def _check_moments(got: np.ndarray, true: np.ndarray, rtol: float, alarm: float) -> None:

@@ -12,6 +12,7 @@ from jaxtyping import Array, Float
 from .._validate import check_count, check_floating
 from ._derivative import check_derivatives
 from ._failure import assert_close, fail
+from ._loss import generator
 
 
 def check_readout(
@@ -46,7 +47,7 @@ def check_readout(
         >>> import jax, jax.numpy as jnp
         >>> from oscillib.checks import check_readout
         >>> from oscillib.observe import ReadoutParams, linear_readout
-        >>> params = ReadoutParams(weight=[[1.0, 0.5]], offset=[0.1])
+        >>> params = ReadoutParams(gain=[[1.0, 0.5]], offset=[0.1])
         >>> check_readout(linear_readout, jnp.ones((2, 2)), params, 1, key=jax.random.key(0))
     """
     check_floating("y", y)
@@ -54,11 +55,11 @@ def check_readout(
     # Without `jax_enable_x64` the second precision is the first.
     for dtype in dict.fromkeys([jnp.dtype(jnp.float32), jnp.zeros(()).dtype]):
         _check_output(readout, _cast(y, dtype), _cast(params, dtype), channels, dtype)
-    key_states, key_derivatives = jax.random.split(key)
-    moved = 1 + 0.1 * jax.random.normal(key_states, (3, *y.shape), y.dtype)
-    states = jnp.concatenate([y[None], y[None] * moved])
-    alone = jnp.stack([jnp.asarray(readout(one, params)) for one in states[:2]])
-    bad = np.argwhere(~np.isfinite(np.asarray(alone[0])))
+    moved = 1 + 0.1 * generator(key).normal(size=(4, *y.shape))
+    moved[0] = 1
+    states = jnp.asarray(np.asarray(y) * moved, y.dtype)
+    alone = np.stack([np.asarray(readout(one, params)) for one in states[:2]])
+    bad = np.argwhere(~np.isfinite(alone[0]))
     if len(bad):
         index = tuple(int(i) for i in bad[0])
         fail(
@@ -66,12 +67,12 @@ def check_readout(
             leaf="readout(y, params)",
             index=index,
             expected="a finite number in every channel",
-            got=np.asarray(alone[0])[index],
+            got=alone[0][index],
             hint="look for a division, logarithm or root of zero",
         )
     rtol = 100 * float(jnp.finfo(y.dtype).eps)
-    atol = rtol * float(jnp.max(jnp.abs(alone)))
-    together = _together(readout, states, params)[:2]
+    atol = rtol * float(np.max(np.abs(alone)))
+    together = np.asarray(_together(readout, states, params))[:2]
     hint = "keep no state between calls, and treat a state as a whole, not by its leading axis"
     assert_close(
         "readout under jit and vmap equals a loop", together, alone, rtol=rtol, atol=atol, hint=hint
@@ -79,7 +80,7 @@ def check_readout(
     if jnp.zeros(()).dtype == jnp.float64:
         point = (_cast(y, jnp.float64), _cast(params, jnp.float64))
         compiled = eqx.filter_jit(readout)
-        check_derivatives(compiled, *point, key=key_derivatives, names=("y", "params"))
+        check_derivatives(compiled, *point, key=key, names=("y", "params"))
 
 
 @eqx.filter_jit

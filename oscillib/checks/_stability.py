@@ -80,8 +80,7 @@ def check_step_bias(
     if variance_limit is not None:
         if not isinstance(params, NoisyParams):
             raise TypeError("`variance_limit` needs a noisy step and `params` a `NoisyParams`.")
-        exact = stationary_covariance(matrix, rate(params.noise)).covariance
-        variance = float(jnp.trace(exact)) / 2
+        variance = float(_variance(matrix, rate(params.noise)))
         allowed = variance_limit * variance
         _within("stationary variance of the step", got.variance, variance, allowed, h, leading)
 
@@ -142,21 +141,22 @@ def check_stability(
     check_step_output(plain, params, rest, h)
     eps = float(jnp.finfo(rest.dtype).eps)
     slack = 100 * rest.size * eps if slack is None else slack
-    sizes = h * (1 + jnp.arange(count)).astype(h.dtype) / count
-    moved, matrices = (np.asarray(x, float) for x in _linearised(plain, params, rest, sizes))
-    size = max(1.0, float(jnp.max(jnp.abs(rest))))
-    for k in range(count):
-        where = f"at step size {float(sizes[k]):.4g}"
-        away = float(np.max(np.abs(moved[k] - np.asarray(rest, float))))
+    size = max(1.0, float(np.max(np.abs(rest))))
+    for length in np.asarray(h) * np.arange(1, count + 1).astype(h.dtype) / count:
+        where = f"at step size {float(length):.4g}"
+        # One size at a time: compiled once, whatever their number.
+        out = _linearised(plain, params, rest, jnp.asarray(length, h.dtype))
+        moved, matrix = (np.asarray(x, float) for x in out)
+        away = float(np.max(np.abs(moved - np.asarray(rest, float))))
         if not away <= 1e3 * eps * size:
             _unstable("fixed point of the step", "`rest` to stay", f"a move of {away:.3g} {where}")
-        if not np.all(np.isfinite(matrices[k])):
+        if not np.all(np.isfinite(matrix)):
             _unstable("stability of the step", "a finite Jacobian", f"one that is not, {where}")
-        largest = float(np.max(np.abs(np.linalg.eigvals(matrices[k]))))
+        largest = float(np.max(np.abs(np.linalg.eigvals(matrix))))
         if largest > 1 + slack:
             got = f"growth by 1 + {largest - 1:.2g} a step {where}"
             _unstable("stability of the step", "no eigenvalue beyond the unit circle", got)
-        power = matrices[k]
+        power = matrix
         for n in (2**j for j in range(11)):
             norm = float(np.linalg.norm(power, 2))
             if norm > bound:
@@ -166,12 +166,11 @@ def check_stability(
 
 
 @eqx.filter_jit
-def _linearised(step: Any, params: Any, rest: Array, sizes: Array) -> tuple[Array, Array]:
-    def one(h):
-        flat = lambda y: step(params, h)(jnp.zeros_like(h), y.reshape(rest.shape)).reshape(-1)
-        return flat(rest.reshape(-1)).reshape(rest.shape), jax.jacfwd(flat)(rest.reshape(-1))
-
-    return jax.vmap(one)(sizes)
+def _linearised(step: Any, params: Any, rest: Array, h: Array) -> tuple[Array, Array]:
+    advance, zero = step(params, h), jnp.zeros_like(h)
+    flat = lambda y: advance(zero, y.reshape(rest.shape)).reshape(-1)
+    matrix = jax.jacfwd(flat)(rest.reshape(-1))
+    return advance(zero, rest), matrix
 
 
 @eqx.filter_jit
@@ -180,6 +179,11 @@ def _bias(
 ) -> tuple[StepBias, Array]:
     flat = lambda y: field(jnp.zeros_like(h), y.reshape(point.shape), inner).reshape(-1)
     return step_bias(step, params, h, point=point), jax.jacfwd(flat)(point.reshape(-1))
+
+
+@eqx.filter_jit
+def _variance(matrix: Array, rate: Array) -> Array:
+    return jnp.trace(stationary_covariance(matrix, rate).covariance) / 2
 
 
 def _within(prop: str, got: Array, truth: float, limit: float, h: Array, leading: complex) -> None:

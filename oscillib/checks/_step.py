@@ -304,11 +304,6 @@ def _step_hint(step: Step, field: Field, params: Any, y0: Array, h: Array, t0: A
     found = []
     if np.array_equal(full, half) and np.any(slope != 0):
         found.append("the step ignores `h`: half of it moves as far")
-    if not np.allclose(slope, later, rtol=1e-6, atol=0.0):
-        if np.array_equal(full, move(h, t0 + h)):
-            found.append("the step ignores `t`, on which the field depends")
-        else:
-            found.append("the field depends on `t`: check the times of the stages")
     # The first move of a consistent step is `h f`; a small part of `h` leaves only rounding.
     small = h * float(jnp.finfo(y0.dtype).eps) ** (1 / 3)
     start = move(small, t0) / float(small)
@@ -321,4 +316,9 @@ def _step_hint(step: Step, field: Field, params: Any, y0: Array, h: Array, t0: A
             if along
             else "a short step does not move along the field"
         )
+    if not np.allclose(slope, later, rtol=1e-6, atol=0.0):
+        if np.array_equal(full, move(h, t0 + h)):
+            found.append("the step ignores `t`, on which the field depends")
+        elif not found:
+            found.append("the field depends on `t`: check the times of the stages")
     return "; ".join(found) or "take a smaller `h`, or claim a larger error"

@@ -4,7 +4,7 @@ import numpy as np
 import pytest
 
 from oscillib.checks import check_mask, check_minimum
-from oscillib.integrate import cut, gather, heun, rollout
+from oscillib.integrate import cut, gather
 from oscillib.losses import continuity, reconstruction
 
 
@@ -22,10 +22,10 @@ def against_line(params, values, mask):
 LINE = {"slope": jnp.array([1.0, -0.5]), "scale": SCALE}
 
 
-@pytest.mark.parametrize("dtype", [jnp.float32, jnp.float64])
-def test_reconstruction_leaves_out_what_is_masked(dtype):
-    params = jax.tree.map(lambda x: x.astype(dtype), LINE)
-    check_mask(against_line, params, VALUES.astype(dtype), MASK, key=jax.random.key(0))
+def test_reconstruction_leaves_out_what_is_masked_in_single_precision():
+    single = lambda x: x.astype(jnp.float32)
+    params = jax.tree.map(single, LINE)
+    check_mask(against_line, params, single(VALUES), MASK, key=jax.random.key(0))
 
 
 def test_what_a_masked_entry_held_before_does_not_matter():
@@ -40,12 +40,11 @@ def test_mask_that_is_turned_round_counts_what_is_masked():
 
 
 def test_reconstruction_of_an_oscillation_is_least_at_the_truth():
-    turn = lambda t, y, params: params["w"] * jnp.stack([-y[1], y[0]]) - params["damping"] * y
-    start, truth = jnp.array([1.0, 0.0]), {"w": jnp.asarray(2.0), "damping": jnp.asarray(0.1)}
-    path = lambda params: rollout(heun(turn), params, start, 0.1, 20)
-    data = path(truth)
-    mask = jnp.ones(data.shape, bool).at[3].set(False)
-    loss = lambda params: reconstruction(path(params), data, mask, scale=jnp.ones(2))
+    t = 0.1 * jnp.arange(20.0)[:, None]
+    truth = {"w": jnp.asarray(2.0), "damping": jnp.asarray(0.1)}
+    path = lambda params: jnp.exp(-params["damping"] * t) * jnp.cos(params["w"] * t)
+    data, mask = path(truth), jnp.ones(t.shape, bool).at[3].set(False)
+    loss = lambda params: reconstruction(path(params), data, mask, scale=jnp.ones(1))
     check_minimum(loss, truth, key=jax.random.key(1))
 
 
