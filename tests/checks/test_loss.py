@@ -4,7 +4,6 @@ import numpy as np
 import pytest
 
 from oscillib.checks import check_mask, check_minimum
-from oscillib.integrate import cut, gather
 from oscillib.losses import continuity, reconstruction
 
 
@@ -23,14 +22,10 @@ LINE = {"slope": jnp.array([1.0, -0.5]), "scale": SCALE}
 
 
 def test_reconstruction_leaves_out_what_is_masked_in_single_precision():
-    single = lambda x: x.astype(jnp.float32)
-    params = jax.tree.map(single, LINE)
-    check_mask(against_line, params, single(VALUES), MASK, key=jax.random.key(0))
-
-
-def test_what_a_masked_entry_held_before_does_not_matter():
-    values = jnp.where(MASK, VALUES, jnp.nan)
-    check_mask(against_line, LINE, values, jnp.asarray(MASK), key=jax.random.key(0))
+    params = jax.tree.map(lambda x: x.astype(jnp.float32), LINE)
+    # What masked entries hold at first does not matter either.
+    values = jnp.asarray(np.where(MASK, VALUES, np.nan), jnp.float32)
+    check_mask(against_line, params, values, jnp.asarray(MASK), key=jax.random.key(0))
 
 
 def test_mask_that_is_turned_round_counts_what_is_masked():
@@ -49,9 +44,8 @@ def test_reconstruction_of_an_oscillation_is_least_at_the_truth():
 
 
 def test_continuity_is_least_where_windows_join():
-    windows = cut(0.1 * jnp.arange(9.0), 4)
-    path = jnp.sin(0.1 * jnp.arange(9.0))[:, None]
-    truth = gather(path, windows)
+    path = np.sin(0.1 * np.arange(9))[:, None]
+    truth = jnp.asarray(np.stack([path[:5], path[4:]]))
 
     def loss(segments):
         return continuity(segments[:-1, -1] - segments[1:, 0], weight=2.0)

@@ -38,6 +38,7 @@ def test_correlated_noise_in_single_precision():
     check_noise(step, decay, params, start, 0.05, rate=mixed, rtol=0.05, key=KEY)
 
 
+@pytest.mark.long
 def test_euler_maruyama_within_its_error():
     # One step: the variance of a linear unit misses h A; the frequency adds (w h)^2 a step.
     check_noise(euler_maruyama(FIELD), FIELD, PARAMS, START, 0.01, rtol=0.05, key=KEY)
