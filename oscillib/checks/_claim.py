@@ -147,7 +147,7 @@ def check_autonomy(field: Field, params: Any, y0: State) -> None:
     first = field(times[0], y0, params)
     for time in times[1:]:
         hint = f"between t = 0 and t = {float(time):g}: is `t` used?"
-        assert_close("autonomy", field(time, y0, params), first, rtol=0, atol=0, hint=hint)
+        assert_close("autonomy", field(time, y0, params), first, rtol=0.0, atol=0.0, hint=hint)
 
 
 def check_fixed_point(
@@ -178,7 +178,7 @@ def check_fixed_point(
     dy = field(jnp.asarray(t, y.dtype), y, params)
     atol = 1e5 * float(jnp.finfo(y.dtype).eps) if atol is None else atol
     hint = "the state does not rest there: a wrong sign or a missing term?"
-    assert_close("claimed fixed point", dy, jnp.zeros_like(y), rtol=0, atol=atol, hint=hint)
+    assert_close("claimed fixed point", dy, jnp.zeros_like(y), rtol=0.0, atol=atol, hint=hint)
 
 
 def check_conserved(
@@ -261,6 +261,6 @@ def check_period(
     out = adaptive_rollout(field, params, y, times, rtol=1e-10, atol=1e-12, max_steps=max_steps)
     size = float(jnp.max(jnp.abs(y)))
     hint = "after one period the state is elsewhere."
-    assert_close("claimed period", out.states[-1], y, rtol=0, atol=rtol * size, hint=hint)
+    assert_close("claimed period", out.states[-1], y, rtol=0.0, atol=rtol * size, hint=hint)
     if min(float(jnp.max(jnp.abs(state - y))) for state in out.states[1:3]) <= rtol * size:
         fail("claimed period", expected="one turn", got="several turns, or rest")

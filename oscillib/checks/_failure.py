@@ -41,7 +41,8 @@ def assert_close(
     for (name, x), y in pairs:
         same_type(prop, name, x, y, hint)
         x, y = np.asarray(x, float), np.asarray(y, float)
-        excess = np.abs(x - y) - (atol + rtol * np.abs(y))
+        with np.errstate(invalid="ignore"):  # infinities
+            excess = np.abs(x - y) - (atol + rtol * np.abs(y))
         excess = np.where(x == y, -np.inf, np.where(np.isnan(excess), np.inf, excess))
         if excess.size and excess.max() > 0:
             index = np.unravel_index(int(np.argmax(excess)), excess.shape)

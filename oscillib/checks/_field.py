@@ -43,16 +43,36 @@ def check_output(field: Field, params: Any, y0: State, *, t: Time = 0.0) -> None
     prop = "output of the field"
     for dtype in (jnp.float64, jnp.float32) if _double(y0) else (y0.dtype,):
         time, y, p = (cast(x, dtype) for x in (jnp.asarray(t, y0.dtype), y0, params))
-        dy = jax.eval_shape(field, time, y, p)
+        dy = _traced(prop, jax.eval_shape, field, time, y, p)
+        _one_width(prop, field, time, y, p)
         if not hasattr(dy, "shape"):
             fail(prop, expected="one array", got=f"a {type(dy).__name__}", hint=_ORDER)
         same_type(prop, "dy", dy, y, _swapped(field, time, y, p))
-        stranger = _other_precision(jax.make_jaxpr(field)(time, y, p).jaxpr, y.dtype)
+        jaxpr = _traced(prop, lambda f, *x: jax.make_jaxpr(f)(*x).jaxpr, field, time, y, p)
+        stranger = _other_precision(jaxpr, y.dtype)
         if stranger:
             fail(
                 prop, leaf="inside", expected=f"{y.dtype} throughout", got=stranger,
                 hint="a constant of fixed precision? Write it as a plain Python number.",
             )  # fmt: skip
+
+
+def _traced(prop: str, transform: Callable, field: Field, t: Any, y: Any, params: Any) -> Any:
+    """Apply a transformation that traces the field; what goes wrong in it is a failure."""
+    __tracebackhide__ = True
+    try:
+        return transform(field, t, y, params)
+    except jax.errors.JAXTypeError as problem:
+        hint = "a Python `if`, `while`, `float()` or numpy call on a value? Use `jax.numpy`."
+        error = problem
+    except Exception as problem:  # the field's own, whatever it is
+        hint = _swapped(field, t, y, params)
+        error = problem
+    words = (str(error).strip().splitlines() or [""])[0]
+    fail(
+        prop, expected="a function of (t, y, params) that can be traced",
+        got=f"{type(error).__name__}: {words}", hint=hint,
+    )  # fmt: skip
 
 
 def _swapped(field: Field, t: Any, y: Any, params: Any) -> str:
@@ -65,6 +85,21 @@ def _swapped(field: Field, t: Any, y: Any, params: Any) -> str:
         if getattr(out, "shape", None) == y.shape:
             return f"{_ORDER} This one gives the right shape when called with {name}."
     return f"{_ORDER} Nothing may be broadcast or left out."
+
+
+def _one_width(prop: str, field: Field, t: Any, y: Any, params: Any) -> None:
+    """Fail where JAX would have to choose between two floating widths."""
+    __tracebackhide__ = True
+    try:
+        with jax.numpy_dtype_promotion("strict"):
+            jax.eval_shape(field, t, y, params)
+    except Exception as problem:
+        if "float32" in str(problem) and "float64" in str(problem):
+            fail(
+                prop, leaf="inside", expected=f"{y.dtype} throughout",
+                got="float32 and float64 in one operation",
+                hint="a constant of fixed precision? Write it as a plain Python number.",
+            )  # fmt: skip
 
 
 def _other_precision(jaxpr: Any, dtype: Any) -> str:
@@ -111,16 +146,8 @@ def check_purity(field: Field, params: Any, y0: State, *, t: Time = 0.0) -> None
     for y in (y0, 1.5 * y0 + 0.1, y0):
         first, second = field(time, y, params), field(time, y, params)
         hint = "hidden state or hidden randomness: all that it depends on must be an argument."
-        assert_close(prop, second, first, rtol=0, atol=0, hint=hint)
-        try:
-            dy = compiled(time, y, params)
-        except jax.errors.JAXTypeError as problem:
-            fail(
-                prop, expected="a function that can be compiled",
-                got=f"{type(problem).__name__}: {str(problem).splitlines()[0]}",
-                hint="a Python `if`, `while`, `float()` or numpy call on a value? Use `jnp.where` "
-                "and `jax.numpy`.",
-            )  # fmt: skip
+        assert_close(prop, second, first, rtol=0.0, atol=0.0, hint=hint)
+        dy = _traced(prop, lambda _, *x: compiled(*x), field, time, y, params)
         rounding = 1e3 * float(jnp.finfo(y.dtype).eps)
         size = float(jnp.max(jnp.abs(first)))
         hint = "a decision or a number is fixed when the function is traced."
@@ -153,7 +180,8 @@ def check_batch(field: Field, params: Any, y0: State, *, key: Array, t: Time = 0
     time = jnp.asarray(t, y0.dtype)
     ys = y0[None] + 0.3 * jax.random.normal(key, (3, *y0.shape), y0.dtype)
     together = jax.vmap(lambda y: field(time, y, params))(ys)
-    alone = jnp.stack([field(time, y, params) for y in ys])
+    one = jax.jit(lambda y: field(time, y, params))
+    alone = jnp.stack([one(y) for y in ys])
     rounding = 1e3 * float(jnp.finfo(y0.dtype).eps)
     size = float(jnp.max(jnp.abs(alone)))
     hint = "entries of different states are mixed."
@@ -260,28 +288,19 @@ def check_gradients(
     """
     __tracebackhide__ = True
     time = jnp.asarray(t, y0.dtype)
-    slopes = jax.jit(jax.jacfwd(lambda y, p: field(time, y, p), argnums=(0, 1)))
+    by_both = lambda transform: transform(lambda y, p: field(time, y, p), argnums=(0, 1))
+    slopes = jax.jit(lambda *x: (by_both(jax.jacfwd)(*x), by_both(jax.jacrev)(*x)))
     places = {"`y0`": y0, "the origin": jnp.zeros_like(y0)}
     places |= {f"`states[{i}]`": jnp.asarray(state) for i, state in enumerate(states)}
     if all(_floats(leaf) for leaf in jax.tree.leaves(params)):
         for place, y in places.items():
-            for name, leaf in zip(("y", "params"), slopes(y, params), strict=True):
-                _finite(f"derivative at {place}", named_leaves(leaf, name))
-    check_derivatives(lambda y: field(time, y, params), y0, key=key, names=("y",), must_move=False)
-    for k, (name, leaf) in enumerate(named_leaves(params, "params")):
-        if not _floats(leaf):
-            continue
-
-        def by_leaf(x: Any, k: int = k) -> Any:
-            leaves, structure = jax.tree.flatten(params)
-            return field(
-                time, y0, jax.tree.unflatten(structure, [*leaves[:k], x, *leaves[k + 1 :]])
-            )
-
-        check_derivatives(
-            by_leaf, leaf, key=jax.random.fold_in(key, k), names=(name,),
-            must_move=name not in unused and bool(np.size(leaf)),
-        )  # fmt: skip
+            for mode in slopes(y, params):
+                for name, leaf in zip(("y", "params"), mode, strict=True):
+                    _finite(f"derivative at {place}", named_leaves(leaf, name))
+    check_derivatives(
+        lambda y, params: field(time, y, params), y0, params, key=key, names=("y", "params"),
+        must_move=True, unmoved=("y", *unused),
+    )  # fmt: skip
 
 
 def _finite(prop: str, leaves: list[tuple[str, Any]]) -> None:
