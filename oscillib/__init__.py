@@ -43,4 +43,4 @@ def __getattr__(name: str):
 
 
 def __dir__() -> list[str]:
-    return sorted([*globals(), *_ROOMS])
+    return sorted({*globals(), *_ROOMS})

@@ -70,8 +70,8 @@ def test_every_room_has_its_place():
 def test_every_room_is_an_attribute_of_the_package():
     import oscillib
 
-    listed = [name for name in dir(oscillib) if not name.startswith("_")]
-    assert sorted(listed) == ROOMS
+    listed = {name for name in dir(oscillib) if not name.startswith("_")}
+    assert sorted(listed - {"jaxtyping"}) == ROOMS  # what the hook of the tests leaves there
     assert all(getattr(oscillib, room).__name__ == f"oscillib.{room}" for room in ROOMS)
     with pytest.raises(AttributeError, match="no attribute 'nonsense'"):
         oscillib.nonsense  # noqa: B018

@@ -35,7 +35,8 @@ def test_field_of_ones_own_is_checked_and_fitted_within_forty_lines(capsys):
     code = example.read_text().split('"""', 2)[2]
     assert lines(OWN_FIELD) == lines(code)
     assert len(lines(code)) <= 40
-    found = runpy.run_path(str(example))
+    with jax.numpy_dtype_promotion("standard"):  # as in a notebook
+        found = runpy.run_path(str(example))
     known, truth = found["known"], found["truth"] | {"noise": 0.05, "reading": 0.05}
     for name, value in truth.items():  # twice the width of a 90 percent interval
         middle = (known.lower[name] + known.upper[name]) / 2
