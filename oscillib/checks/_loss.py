@@ -99,7 +99,7 @@ def check_minimum(
     truth: Any,
     *,
     key: Array,
-    directions: int = 8,
+    directions: int = 4,
     displacement: float = 1e-4,
 ) -> None:
     """Check that a loss on noise-free data has its minimum at the parameters that made the data.
@@ -107,15 +107,16 @@ def check_minimum(
         curvature d' H d >= 0,   minimum along d: |g'd| <= displacement d' H d
 
     along random directions `d`, each entry of which is as large as that parameter (1 where it is
-    0); `g` and `H` are gradient and Hessian at `truth`. So `displacement` is how far the minimum
-    may be from the truth, relative to the parameters. The gradient itself is checked beside the
-    truth by `check_derivatives`, if the parameters are in float64.
+    0); `g` and `H` are gradient and Hessian at `truth`. In some of them every parameter moves, in
+    the others one leaf by itself: a stiff leaf hides nothing in a sloppy one. `displacement` is how
+    far the minimum may be from the truth, relative to the parameters. The gradient itself is
+    checked beside the truth by `check_derivatives`, if the parameters are in float64.
 
     Arguments:
         loss: `loss(params) -> scalar`, with noise-free data of `truth` bound.
         truth: PyTree of parameters; its floating-point arrays are what is varied.
         key: random key of the directions.
-        directions: how many; default 8.
+        directions: how many of all parameters together, and of each leaf; default 4.
         displacement: default 1e-4. In float32 rounding of the data alone may exceed it.
 
     Raises:
@@ -134,9 +135,19 @@ def check_minimum(
     random = generator(key)
     moving, fixed = eqx.partition(truth, eqx.is_inexact_array)
     scale = jax.tree.map(lambda x: np.where(np.asarray(x) == 0, 1, np.abs(x)), moving)
-    draw = lambda x, n: jnp.asarray(x * random.normal(size=(n, *x.shape)), x.dtype)
-    along = jax.tree.map(lambda x: draw(x, directions), scale)
-    value, gradient, slopes, curvatures = _second_order(loss, moving, fixed, along)
+    draw = lambda x: jnp.asarray(x * random.normal(size=x.shape), x.dtype)
+    beside = jax.tree.map(lambda x, size: x + 0.03 * draw(size), moving, scale)
+    leaves, structure = jax.tree.flatten(scale)
+    names = ["all parameters", *(name for name, _ in named_leaves(scale, "params"))]
+    groups = np.repeat(np.arange(len(names)), directions)
+    masks = [(groups == 0) | (groups == k + 1) for k in range(len(leaves))]
+    along = [
+        jnp.asarray(np.stack([m * x * random.normal(size=x.shape) for m in mask]), x.dtype)
+        for x, mask in zip(leaves, masks, strict=True)
+    ]
+    value, gradient, slopes, curvatures, elsewhere = _second_order(
+        loss, moving, fixed, beside, jax.tree.unflatten(structure, along)
+    )
     _check_finite((value, gradient), "noise-free data")
     slopes, curvatures = np.asarray(slopes, float), np.asarray(curvatures, float)
     largest = np.max(np.abs(curvatures))
@@ -147,30 +158,35 @@ def check_minimum(
             "a loss that is constant at the truth",
             "bind the data, and use every parameter",
         )
-    k = int(np.argmin(curvatures))
-    if curvatures[k] < -1e-6 * largest:
-        got = f"curvature {curvatures[k]:.3g} along direction {k} ({largest:.3g} at most)"
+    own = np.abs(curvatures).reshape(-1, directions).max(axis=1)[groups]
+    k = int(np.argmin(curvatures + 1e-6 * own + 1e-10 * largest))
+    if curvatures[k] < -1e-6 * own[k] - 1e-10 * largest:
+        got = f"curvature {curvatures[k]:.3g} along a direction of {names[groups[k]]}"
         hint = "the truth is a maximum or a saddle: check the sign"
         _no_minimum("curvature at the truth", "no negative curvature", got, hint)
+    # A flat direction leaves the rounding of terms that cancel at the truth, not beside it.
+    blur = 1e3 * float(np.finfo(value.dtype).eps) * float(np.max(np.abs(elsewhere)))
     with np.errstate(divide="ignore", invalid="ignore"):
-        away = np.nan_to_num(np.abs(slopes) / np.abs(curvatures), nan=0.0, posinf=np.inf)
+        away = np.maximum(np.abs(slopes) - blur, 0) / np.abs(curvatures)
+    away = np.nan_to_num(away, nan=0.0, posinf=np.inf)
     k = int(np.argmax(away))
     if away[k] > displacement:
-        leaf, index, worst = _steepest(gradient, scale)
+        where = gradient if groups[k] == 0 else jax.tree.leaves(gradient)[groups[k] - 1]
+        sizes = scale if groups[k] == 0 else leaves[groups[k] - 1]
+        leaf, index, worst = _steepest(where, sizes)
         fail(
             "gradient at the truth",
-            leaf=leaf,
+            leaf=leaf if groups[k] == 0 else names[groups[k]],
             index=index,
             expected=f"0 (minimum within {displacement:.1g} of the truth)",
-            got=f"{worst:.6g} (minimum {away[k]:.3g} of the parameters away, along direction {k})",
+            got=f"{worst:.6g} (minimum {away[k]:.3g} of the parameters away)",
             hint="the data must be noise-free data of `truth`; look for an offset in the loss",
         )
-    moved = jax.tree.map(lambda x, size: x + 0.03 * draw(size, 1)[0], moving, scale)
-    beside = eqx.combine(moved, fixed)
     # Differences mean nothing in single precision.
     if all(x.dtype == jnp.float64 for x in jax.tree.leaves(moving)):
         compiled = eqx.filter_jit(loss)
-        check_derivatives(compiled, beside, key=jax.random.fold_in(key, 0), names=("params",))
+        point = eqx.combine(beside, fixed)
+        check_derivatives(compiled, point, key=jax.random.fold_in(key, 0), names=("params",))
 
 
 def _evaluate(loss: Any, params: Any, values: Array, mask: Array) -> tuple[Array, Any]:
@@ -186,16 +202,18 @@ def generator(key: Array) -> np.random.Generator:
 
 
 @eqx.filter_jit
-def _second_order(loss: Any, moving: Any, fixed: Any, along: Any) -> tuple[Any, ...]:
+def _second_order(
+    loss: Any, moving: Any, fixed: Any, beside: Any, along: Any
+) -> tuple[Any, Any, Array, Array, Array]:
     at = lambda p: _scalar(loss(eqx.combine(p, fixed)))
     value, gradient = jax.value_and_grad(at)(moving)
+    elsewhere = jax.grad(at)(beside)
 
     def one(d):
         slope, bend = jax.jvp(jax.grad(at), (moving,), (d,))
-        return _inner(slope, d), _inner(bend, d)
+        return _inner(slope, d), _inner(bend, d), _inner(elsewhere, d)
 
-    slopes, curvatures = jax.vmap(one)(along)
-    return value, gradient, slopes, curvatures
+    return value, gradient, *jax.vmap(one)(along)
 
 
 def _scalar(value: Any) -> Array:

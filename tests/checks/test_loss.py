@@ -60,6 +60,16 @@ def test_flat_along_one_parameter_is_still_a_minimum():
     check_minimum(loss, truth, key=jax.random.key(3))
 
 
+def test_a_stiff_parameter_hides_nothing_in_a_sloppy_one():
+    loss = lambda p: 1e8 * (p["stiff"] - 1.0) ** 2 + (p["sloppy"] - 2.1) ** 2
+    truth = {"stiff": jnp.asarray(1.0), "sloppy": jnp.asarray(2.0)}
+    with pytest.raises(AssertionError, match=r"gradient at the truth: params\['sloppy'\]"):
+        check_minimum(loss, truth, key=jax.random.key(5))
+    saddle = lambda p: 1e8 * (p["stiff"] - 1.0) ** 2 - (p["sloppy"] - 2.0) ** 2
+    with pytest.raises(AssertionError, match=r"negative curvature.*sloppy"):
+        check_minimum(saddle, truth, key=jax.random.key(5))
+
+
 def test_the_steepest_entry_is_named():
     target = jnp.array([1.0, 2.0, 3.0])
     loss = lambda params: jnp.sum((params["a"] - target) ** 2)
