@@ -101,8 +101,8 @@ def check_stability(
 
     for `count` step sizes from `h / count` to `h`, `n` up to 1024. The test problem is that of
     `params`: a unit that turns without growth is the hardest for an explicit step, one with strong
-    damping shows the limit of a stiff one. Choose parameters for which the field itself neither
-    grows at rest nor has growth to lose by saturation.
+    damping shows the limit of a stiff one. The field itself must be
+    damped or neutral at `rest`.
 
     Arguments:
         step: `step(params, h) -> advance`, or a noisy step, whose noise is left out.
