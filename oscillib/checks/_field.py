@@ -1,7 +1,8 @@
 """Vector fields as functions: what any field must be, whatever its equation."""
 
 import dataclasses
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
+from copy import copy
 from typing import Any
 
 import jax
@@ -106,7 +107,8 @@ def _other_precision(jaxpr: Any, dtype: Any) -> str:
     """Name the first floating array of another precision inside a traced function."""
     for x in (*jaxpr.constvars, *jaxpr.invars, *(v for e in jaxpr.eqns for v in e.outvars)):
         other = getattr(x.aval, "dtype", dtype)
-        if jnp.issubdtype(other, jnp.floating) and other != dtype:
+        plain = getattr(x.aval, "weak_type", False)  # a Python number, which adapts itself
+        if jnp.issubdtype(other, jnp.floating) and other != dtype and not plain:
             return f"an array of {other}, shape {x.aval.shape}"
     for equation in jaxpr.eqns:
         for inner in jax.tree.leaves(equation.params, is_leaf=lambda x: hasattr(x, "eqns")):
@@ -120,9 +122,9 @@ def _other_precision(jaxpr: Any, dtype: Any) -> str:
 def check_purity(field: Field, params: Any, y0: State, *, t: Time = 0.0) -> None:
     """Check that a field depends on its arguments alone, and may be compiled.
 
-    Two calls must agree to the bit, a compiled call must agree with a plain one to rounding, and
-    another compiled call with other values too: a decision of Python on a value, hidden state and
-    hidden randomness are caught.
+    Nothing may be written into `params`. Two calls must agree to the bit, a compiled call must
+    agree with a plain one to rounding, and another compiled call with other values too: a decision
+    of Python on a value, hidden state and hidden randomness are caught.
 
     Arguments:
         field: `field(t, y, params) -> dy`.
@@ -143,6 +145,10 @@ def check_purity(field: Field, params: Any, y0: State, *, t: Time = 0.0) -> None
     __tracebackhide__ = True
     prop, time = "purity of the field", jnp.asarray(t, y0.dtype)
     compiled = jax.jit(field)
+    before = jax.tree.map(copy, params)
+    field(time, y0, params)
+    hint = "it writes into its argument: give a new value a new name."
+    assert_close(f"{prop}: params", params, before, rtol=0.0, atol=0.0, hint=hint)
     for y in (y0, 1.5 * y0 + 0.1, y0):
         first, second = field(time, y, params), field(time, y, params)
         hint = "hidden state or hidden randomness: all that it depends on must be an argument."
@@ -255,27 +261,31 @@ def check_gradients(
     *,
     key: Array,
     t: Time = 0.0,
-    states: tuple[State, ...] | list[State] = (),
-    unused: tuple[str, ...] = (),
+    states: Sequence[State] = (),
+    unused: Sequence[str] = (),
+    origin: bool = True,
 ) -> None:
     """Check the derivatives of a field by its state and by every leaf of its parameters.
 
     At `y0` forward mode, reverse mode and central differences must agree. There, at the origin and
-    at `states` all derivatives must be finite: a square root or an angle at rest is the usual way
-    to lose them. Needs 64-bit floats.
+    at `states` all derivatives must be finite in both modes: a square root or an angle at rest is
+    the usual way to lose them. Every parameter must move something in one of these states or in
+    another one near `y0`. Needs 64-bit floats.
 
     Arguments:
         field: `field(t, y, params) -> dy`.
-        params: its parameters.
+        params: its parameters; whole numbers and truth values among them are held.
         y0: a state away from kinks, shape `(*state)`.
         key: random key of the directions.
         t: time, default 0.
         states: further states at which derivatives must be finite, such as states of rest.
         unused: names of parameters, as in messages (`params.gain`), that need not move anything.
+        origin: whether the field is defined at the origin, default True; a pull by `1/r^2` is not.
 
     Raises:
         AssertionError: derivatives disagree, are not finite, or a parameter moves nothing.
         TypeError: not in 64-bit floats.
+        ValueError: `unused` names no parameter.
 
     Example:
         >>> import jax
@@ -287,20 +297,40 @@ def check_gradients(
     Source: common practice, no source.
     """
     __tracebackhide__ = True
-    time = jnp.asarray(t, y0.dtype)
-    by_both = lambda transform: transform(lambda y, p: field(time, y, p), argnums=(0, 1))
-    slopes = jax.jit(lambda *x: (by_both(jax.jacfwd)(*x), by_both(jax.jacrev)(*x)))
-    places = {"`y0`": y0, "the origin": jnp.zeros_like(y0)}
+    time, (near, key) = jnp.asarray(t, y0.dtype), jax.random.split(key)
+    leaves, structure = jax.tree.flatten(params)
+    labels = {k: name for k, (name, x) in enumerate(named_leaves(params, "params")) if _floats(x)}
+    if missing := set(unused) - set(labels.values()):
+        raise ValueError(
+            f"`unused` must name parameters, {', '.join(labels.values())}; got {sorted(missing)}."
+        )
+
+    def by_leaf(y: Any, floats: dict) -> Any:
+        whole = [floats.get(k, leaf) for k, leaf in enumerate(leaves)]
+        return field(time, y, jax.tree.unflatten(structure, whole))
+
+    floats = {k: leaves[k] for k in labels}
+    both = jax.jit(
+        lambda *x: [mode(by_leaf, argnums=(0, 1))(*x) for mode in (jax.jacfwd, jax.jacrev)]
+    )
+    places = {"`y0`": y0} | ({"the origin": jnp.zeros_like(y0)} if origin else {})
     places |= {f"`states[{i}]`": jnp.asarray(state) for i, state in enumerate(states)}
-    if all(_floats(leaf) for leaf in jax.tree.leaves(params)):
-        for place, y in places.items():
-            for mode in slopes(y, params):
-                for name, leaf in zip(("y", "params"), mode, strict=True):
-                    _finite(f"derivative at {place}", named_leaves(leaf, name))
+    found = {place: both(y, floats) for place, y in places.items()}
+    for place, modes in found.items():
+        for by_state, by_params in modes:
+            named = [(labels[k], x) for k, x in by_params.items()]
+            _finite(f"derivative at {place}", [("y", by_state), *named])
     check_derivatives(
-        lambda y, params: field(time, y, params), y0, params, key=key, names=("y", "params"),
-        must_move=True, unmoved=("y", *unused),
-    )  # fmt: skip
+        lambda y, params: field(time, y, params), y0, params, key=key, names=("y", "params")
+    )
+    found["near"] = both(y0 * (1 + 0.2 * jax.random.normal(near, y0.shape, y0.dtype)), floats)
+    for k, label in labels.items():
+        moves = any(np.any(modes[0][1][k] != 0) for modes in found.values())
+        if not moves and label not in unused and np.size(leaves[k]):
+            fail(
+                f"influence of {label}", expected="a derivative somewhere", got="0 everywhere",
+                hint="does the field use it? If it need not here, name it in `unused`.",
+            )  # fmt: skip
 
 
 def _finite(prop: str, leaves: list[tuple[str, Any]]) -> None:

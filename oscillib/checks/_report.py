@@ -9,7 +9,7 @@ class Finding(NamedTuple):
 
     Attributes:
         prop: what was checked.
-        outcome: `"passed"`, `"failed"` or `"not claimed"`.
+        outcome: `"passed"`, `"failed"`, `"not claimed"` or `"not checked"`.
         message: what is wrong, or why it was not checked.
     """
 

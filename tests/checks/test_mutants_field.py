@@ -170,7 +170,7 @@ MUTANTS: dict[str, tuple[str, Any, str]] = {
         "influence of params['frequency']",
     ),
     "coupling forgotten": ("gradients", lambda t, y, p: units(y, p), "params['coupling']"),
-    "rounded": ("gradients", lambda t, y, p: jnp.round(sound(t, y, p), 3), "derivative along"),
+    "rounded": ("gradients", lambda t, y, p: jnp.round(sound(t, y, p), 3), "derivative"),
     "integer division": ("gradients", lambda t, y, p: sound(t, y, p) // 0.05, "0 everywhere"),
     "state of rest moved": ("rest", lambda t, y, p: sound(t, y, p) + 0.01, "claimed fixed point"),
     "coupling off by one": (
