@@ -9,6 +9,7 @@ from ._claim import (
     check_symmetry as check_symmetry,
     relabelling as relabelling,
     rotation as rotation,
+    time_shift as time_shift,
 )
 from ._derivative import check_derivatives as check_derivatives
 from ._field import (

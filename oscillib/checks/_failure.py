@@ -47,8 +47,11 @@ def assert_close(
         if excess.size and excess.max() > 0:
             index = np.unravel_index(int(np.argmax(excess)), excess.shape)
             where = tuple(int(i) for i in index)
-            text = f"{y[index]:.6g} within {atol + rtol * abs(float(y[index])):.1g}"
-            fail(prop, leaf=name, index=where, expected=text, got=f"{x[index]:.6g}", hint=hint)
+            got, want = (f"{v[index]:.6g}" for v in (x, y))
+            if got == want:  # they differ further on
+                got, want = (f"{v[index]:.17g}" for v in (x, y))
+            text = f"{want} within {atol + rtol * abs(float(y[index])):.1g}"
+            fail(prop, leaf=name, index=where, expected=text, got=got, hint=hint)
 
 
 def same_type(prop: str, name: str, actual: Any, expected: Any, hint: str = "") -> None:

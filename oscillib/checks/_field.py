@@ -149,7 +149,7 @@ def check_purity(field: Field, params: Any, y0: State, *, t: Time = 0.0) -> None
     field(time, y0, params)
     hint = "it writes into its argument: give a new value a new name."
     assert_close(f"{prop}: params", params, before, rtol=0.0, atol=0.0, hint=hint)
-    for y in (y0, 1.5 * y0 + 0.1, y0):
+    for y in (y0, 0.8 * y0, y0):
         first, second = field(time, y, params), field(time, y, params)
         hint = "hidden state or hidden randomness: all that it depends on must be an argument."
         assert_close(prop, second, first, rtol=0.0, atol=0.0, hint=hint)
@@ -161,7 +161,7 @@ def check_purity(field: Field, params: Any, y0: State, *, t: Time = 0.0) -> None
 
 
 def check_batch(field: Field, params: Any, y0: State, *, key: Array, t: Time = 0.0) -> None:
-    """Check that `vmap` over states equals a loop over them.
+    """Check that `vmap` over states and parameters equals a loop over them.
 
     Arguments:
         field: `field(t, y, params) -> dy`.
@@ -184,10 +184,14 @@ def check_batch(field: Field, params: Any, y0: State, *, key: Array, t: Time = 0
     """
     __tracebackhide__ = True
     time = jnp.asarray(t, y0.dtype)
-    ys = y0[None] + 0.3 * jax.random.normal(key, (3, *y0.shape), y0.dtype)
-    together = jax.vmap(lambda y: field(time, y, params))(ys)
-    one = jax.jit(lambda y: field(time, y, params))
-    alone = jnp.stack([one(y) for y in ys])
+    ys = [aside(y0, by) for by in jax.random.normal(key, (3, *y0.shape), y0.dtype)]
+    ps = [scaled(params, scale) for scale in (1.0, 1.1, 0.9)]
+    axes = jax.tree.map(lambda x: 0 if _floats(x) else None, params)
+    stack = lambda *x: jnp.stack([jnp.asarray(part) for part in x]) if _floats(x[0]) else x[0]
+    batch = jax.vmap(lambda y, p: field(time, y, p), in_axes=(0, axes))
+    together = batch(jnp.stack(ys), jax.tree.map(stack, *ps))
+    one = jax.jit(lambda y, p: field(time, y, p))
+    alone = jnp.stack([one(y, p) for y, p in zip(ys, ps, strict=True)])
     rounding = 1e3 * float(jnp.finfo(y0.dtype).eps)
     size = float(jnp.max(jnp.abs(alone)))
     hint = "entries of different states are mixed."
@@ -232,8 +236,7 @@ def check_traces_once(field: Field, params: Any, y0: State, *, t: Time = 0.0) ->
 
     compiled = jax.jit(counted)
     for scale in (1.0, 1.1, 0.9):
-        other = jax.tree.map(lambda x, s=scale: x * s if _floats(x) else x, params)
-        compiled(jnp.asarray(scale * t, y0.dtype), scale * y0, other)
+        compiled(jnp.asarray(scale * t, y0.dtype), scale * y0, scaled(params, scale))
     if count > 1:
         fail(prop, expected="1 trace", got=f"{count}", hint="arrays whose shape or dtype changes?")
 
@@ -323,7 +326,7 @@ def check_gradients(
     check_derivatives(
         lambda y, params: field(time, y, params), y0, params, key=key, names=("y", "params")
     )
-    found["near"] = both(y0 * (1 + 0.2 * jax.random.normal(near, y0.shape, y0.dtype)), floats)
+    found["near"] = both(aside(y0, jax.random.normal(near, y0.shape, y0.dtype)), floats)
     for k, label in labels.items():
         moves = any(np.any(modes[0][1][k] != 0) for modes in found.values())
         if not moves and label not in unused and np.size(leaves[k]):
@@ -345,6 +348,21 @@ def _finite(prop: str, leaves: list[tuple[str, Any]]) -> None:
                 hint="a root, norm, angle or division at zero? Replace its argument before it, by "
                 "`jnp.where`, or write it without.",
             )  # fmt: skip
+
+
+def aside(y: Any, by: Any) -> Any:
+    """Return states beside one, each entry moved by up to a half of itself.
+
+    No entry changes its sign, since a field may be defined for positive ones only; one at zero
+    moves up.
+    """
+    size = jnp.where(y == 0, jnp.max(jnp.abs(y), initial=0), y)
+    return y + 0.5 * jnp.where(y == 0, jnp.abs(jnp.tanh(by)), jnp.tanh(by)) * size
+
+
+def scaled(tree: Any, by: float) -> Any:
+    """Multiply floating leaves."""
+    return jax.tree.map(lambda x: x * by if _floats(x) else x, tree)
 
 
 def cast(tree: Any, dtype: Any) -> Any:
