@@ -8,7 +8,10 @@ import subprocess
 import sys
 from pathlib import Path
 
+import jaxtyping
 import pytest
+
+import oscillib
 
 
 ROOT = Path(__file__).parent.parent
@@ -159,6 +162,36 @@ def test_import_of_all_rooms_draws_in_no_plots_and_no_signal_processing():
     )
     out = subprocess.run([sys.executable, "-c", script], capture_output=True, text=True)
     assert out.returncode == 0, out.stderr
+
+
+def test_rooms_are_imported_when_used():
+    script = (
+        "import sys, oscillib;"
+        "early = [m for m in sys.modules if m.startswith('oscillib.') or m == 'jax'];"
+        "assert not early, early;"
+        "assert set(dir(oscillib)) >= {ROOMS}, dir(oscillib);"
+        "assert oscillib.fields is sys.modules['oscillib.fields'];"
+        "assert 'oscillib.fitting' not in sys.modules;"
+        "assert not hasattr(oscillib, 'feilds')"
+    ).replace("{ROOMS}", repr(set(ROOMS)))
+    out = subprocess.run([sys.executable, "-c", script], capture_output=True, text=True)
+    assert out.returncode == 0, out.stderr
+
+
+def test_rooms_that_are_listed_exist():
+    tree = ast.parse((PACKAGE / "__init__.py").read_text())
+    lists = [
+        n.value for n in ast.walk(tree) if isinstance(n, ast.Assign) and "_ROOMS" in ast.dump(n)
+    ]
+    assert ast.literal_eval(lists[0]) == tuple(ROOMS)
+    (block,) = [n for n in ast.walk(tree) if isinstance(n, ast.ImportFrom) and n.level == 1]
+    assert [alias.name for alias in block.names] == ROOMS  # what a type checker sees
+
+
+def test_annotations_are_checked_in_the_tests():
+    # The hook must come before the first import of the package, which our plugin could spoil.
+    with pytest.raises(jaxtyping.TypeCheckError):
+        oscillib.fields.order_parameter("no array")  # pyright: ignore[reportArgumentType]
 
 
 def test_top_level_holds_what_the_guide_says():
