@@ -74,18 +74,26 @@ def check_derivatives(
         if leaf.dtype != jnp.float64:
             raise TypeError(f"`{labels[k]}` is {leaf.dtype}; derivatives are checked in float64.")
 
-    def along(xs: list[Array]) -> Array:
+    def whole(xs: list[Array]) -> Any:
         leaves = list(flat)
         for k, x in zip(places, xs, strict=True):
             leaves[k] = x
-        out = f(*jax.tree.unflatten(structure, leaves))
-        parts = [jnp.ravel(jnp.asarray(o)) for o in jax.tree.leaves(out)]
+        return f(*jax.tree.unflatten(structure, leaves))
+
+    def along(xs: list[Array]) -> Array:
+        parts = [jnp.ravel(jnp.asarray(o)) for o in jax.tree.leaves(whole(xs))]
         return jnp.concatenate([p.astype(jnp.float64) for p in parts])
 
+    # A place in the flat result, by its name.
+    where = [
+        (name, index)
+        for name, out in named_leaves(jax.eval_shape(whole, point), "result")
+        for index in np.ndindex(*out.shape)
+    ]
     routes = jax.jit(partial(_routes, along))
     for i, k in enumerate(places):
         keys = jax.random.split(jax.random.fold_in(key, k), directions)
-        moved = [_compare(routes, point, i, labels[k], one, rtol) for one in keys]
+        moved = [_compare(routes, point, i, labels[k], one, rtol, where) for one in keys]
         if labels[k] not in unmoved and must_move and not any(moved):
             fail(
                 f"influence of {labels[k]}", expected="a derivative somewhere",
@@ -116,7 +124,13 @@ def _routes(along: Callable, xs: list[Array], vs: list[Array], weight_key: Array
 
 
 def _compare(
-    routes: Callable, point: list[Array], i: int, label: str, key: Array, rtol: float
+    routes: Callable,
+    point: list[Array],
+    i: int,
+    label: str,
+    key: Array,
+    rtol: float,
+    where: list[tuple[str, tuple[int, ...]]],
 ) -> bool:
     """Compare the three along one direction of leaf `i`; tell whether anything moved."""
     __tracebackhide__ = True
@@ -142,7 +156,7 @@ def _compare(
     if np.any(bad):
         worst = int(np.argmax(excess))
         fail(
-            prop, leaf="result", index=(worst,),
+            prop, leaf=where[worst][0], index=where[worst][1],
             expected=f"{slope[worst]:.8g} of central differences, within {allowed[worst]:.1g}",
             got=f"{forward[worst]:.8g} of forward mode", hint=hint,
         )  # fmt: skip
