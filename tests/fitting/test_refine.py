@@ -68,10 +68,10 @@ def test_local_level_of_the_nile(nile):
     fit = jax.jit(lambda p: refine(lambda q: local_level(q, nile), p, constraints))(params)
     assert fit.status == Status.CONVERGED and fit.steps <= 8
     # Durbin and Koopman 2001, section 2.10: variances 15,099 and 1,469.1, log-likelihood -632.54
-    # (from memory).
-    assert abs(fit.params["noise"] - 15099) < 1
-    assert abs(fit.params["level"] - 1469.1) < 0.1
-    assert abs(fit.loss - 632.54) < 0.01
+    # (from memory); further digits seen in public tests, and found by another optimiser.
+    assert abs(fit.params["noise"] - 15098.52) < 0.1
+    assert abs(fit.params["level"] - 1469.18) < 0.1
+    assert abs(fit.loss - 632.5456) < 0.002
 
 
 def test_rosenbrock():

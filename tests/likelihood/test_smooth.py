@@ -24,11 +24,13 @@ def test_equals_dense_regression(step, pair, dense, recording):
     cross = covariance @ full.T
     gain = np.linalg.solve(full @ cross + np.diag(noise), cross.T).T
     data = np.asarray(values).ravel()[keep]
-    np.testing.assert_allclose(out.means.ravel(), mean + gain @ (data - expected), atol=1e-10)
+    np.testing.assert_allclose(
+        out.means.ravel(), mean + gain @ (data - expected), rtol=0, atol=1e-10
+    )
     spread = (covariance - gain @ cross.T).reshape(40, 4, 40, 4)
     k = np.arange(40)
-    np.testing.assert_allclose(out.covariances, spread[k, :, k], atol=1e-10)
-    np.testing.assert_allclose(out.lag_covariances, spread[k[1:], :, k[:-1]], atol=1e-10)
+    np.testing.assert_allclose(out.covariances, spread[k, :, k], rtol=0, atol=1e-10)
+    np.testing.assert_allclose(out.lag_covariances, spread[k[1:], :, k[:-1]], rtol=0, atol=1e-10)
 
 
 def test_without_noise_from_a_known_start_nothing_is_left_to_learn(step, pair, recording):

@@ -32,7 +32,7 @@ def test_damped_oscillator(stationary):
     # Closed form: s^2 / 2|a| in each component, no correlation.
     matrix = FIELD.linear_matrix(HopfParams([-0.2], [2 * np.pi * 0.05]))
     out = stationary(matrix, planar_rate(jnp.array([0.02])))
-    np.testing.assert_allclose(out.covariance, 0.001 * np.eye(2), atol=1e-15)
+    np.testing.assert_allclose(out.covariance, 0.001 * np.eye(2), rtol=0, atol=1e-15)
     assert bool(out.damped)
 
 
@@ -43,7 +43,7 @@ def test_three_states(stationary):
         0.170939300442,
     ]  # fmt: skip
     covariance = stationary(MATRIX, RATE).covariance
-    np.testing.assert_allclose(covariance[UPPER], expected, atol=1e-12)
+    np.testing.assert_allclose(covariance[UPPER], expected, rtol=0, atol=1e-12)
 
 
 def test_derivative():
@@ -53,7 +53,7 @@ def test_derivative():
         0.013466989473,
     ]  # fmt: skip
     total = lambda x: stationary_covariance(MATRIX.at[0, 1].set(x), RATE).covariance[UPPER]
-    np.testing.assert_allclose(jax.jacrev(total)(jnp.asarray(-2.0)), expected, atol=1e-8)
+    np.testing.assert_allclose(jax.jacrev(total)(jnp.asarray(-2.0)), expected, rtol=0, atol=1e-8)
 
 
 def test_a_large_network_and_very_slow_damping(stationary):
@@ -79,7 +79,7 @@ def test_lagged_covariance_of_a_damped_oscillator():
     # Closed forms s^2/2|a| e^(a tau) cos(w tau), and the same with the sine.
     matrix = FIELD.linear_matrix(HopfParams([-0.2], [2 * np.pi * 0.05]))
     out = lagged_covariance(matrix, 0.001 * jnp.eye(2), jnp.array([3.0]))[0]
-    np.testing.assert_allclose(out[0], [0.000322583385983, -0.000443997940311], atol=1e-15)
+    np.testing.assert_allclose(out[0], [0.000322583385983, -0.000443997940311], rtol=0, atol=1e-15)
 
 
 def test_single_precision():
