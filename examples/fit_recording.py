@@ -71,7 +71,7 @@ def main(argv: list[str] | None = None) -> dict:
     initial = initial_params(clock.start)
     prior = Prior(initial)
     params, windows = fit_windows(data, clock, initial, prior, rounds=args.rounds)
-    params, fit = fit_noise(data, clock, params, prior, max_steps=3 * args.rounds)
+    params, fit = fit_noise(data, clock, params, prior, max_steps=2 * args.rounds)
     forecast = forecast_held_out(data, clock, params, fit, args.horizon)
     report = {
         "input": describe_input(data),
