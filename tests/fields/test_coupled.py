@@ -85,6 +85,16 @@ def test_amplitude_death_of_a_population():
     assert abs(crossing(growth, 1.5, 3.0) - 2.27331398) < 1e-3
 
 
+def test_amplitude_death_of_a_population_without_end():
+    # As above. Equally spaced frequencies are off by a multiple of 1/n^2, then of 1/n^4: two
+    # populations give what infinitely many would.
+    def end(n):
+        frequency = 2.5 * (2 * (np.arange(n) + 0.5) / n - 1)
+        return crossing(lambda k: death(1.0, jnp.full((n, n), k / n), frequency), 2.2, 2.4)
+
+    assert abs((4 * end(40) - end(20)) / 3 - 2.27331398) < 1e-5
+
+
 # Aronson, Ermentrout & Kopell 1990 (from memory): radius^2 1 - K + sqrt(K^2 - D^2/4) and phase
 # difference asin(D / 2K) where locked; zero radius in death.
 @pytest.mark.parametrize("k, d, square, phase", [(0.9, 1.2, 0.77082039325, 0.729727656227)])

@@ -1,7 +1,11 @@
+from typing import Any
+
 import jax
 import jax.numpy as jnp
 import numpy as np
 import pytest
+import scipy.optimize
+import scipy.special
 from scipy.integrate import solve_ivp
 
 from oscillib.fields import (
@@ -122,3 +126,116 @@ def test_order_parameter_of_random_phases():
     phase = jnp.asarray(2 * np.pi * (np.arange(4000) + 0.5) / 4000)
     pairs = jax.vmap(lambda x: order_parameter(jnp.stack([0 * x, x])))(phase)
     assert abs(np.mean(np.linalg.norm(pairs, axis=1)) - 0.6366197724) < 1e-6
+
+
+def test_order_parameter_of_many_random_phases():
+    # E r = sqrt(pi / 4n) nearly and E r^2 = 1/n: closed form (Rayleigh walk). The square is also
+    # that of the phase-locking value of n independent pairs; of two, it is above 3/4 in a third.
+    phases = jnp.asarray(np.random.default_rng(0).uniform(0, 2 * np.pi, (4000, 1000)))
+    length = lambda x: np.linalg.norm(jax.vmap(order_parameter)(x), axis=1)
+    assert abs(np.mean(length(phases)) - 0.02802495608) < 7e-4
+    assert abs(1000 * np.mean(length(phases) ** 2) - 1) < 4 / np.sqrt(4000)
+    assert abs(np.mean(length(phases.reshape(-1, 32)[:, :30]) ** 2) - 1 / 30) < 0.001
+    apart = 2 * np.pi * (jnp.arange(3000.0) + 0.5) / 3000
+    both = length(jnp.stack([0 * apart, apart], axis=1))
+    assert abs(np.mean(2 * both**2 > 1.5) - 1 / 3) < 1e-3
+
+
+# The first trigonometric moment: I1(2) / I0(2) of von Mises' distribution, e^(-1/2) of the wrapped
+# normal one of standard deviation 1; closed forms.
+@pytest.mark.parametrize(
+    "moment, expected",
+    [
+        (lambda j: scipy.special.ive(j, 2.0) / scipy.special.ive(0, 2.0), 0.697774657964),
+        (lambda j: np.exp(-(j**2) / 2), 0.606530659713),
+    ],
+    ids=["von Mises", "wrapped normal"],
+)
+def test_order_parameter_is_the_mean_resultant_length(moment, expected):
+    # Phases at the quantiles: the distribution function is a Fourier series, and the mean over a
+    # period of a smooth periodic function converges faster than any power.
+    j = np.arange(1, 40)
+    low, high = np.full(2000, -np.pi), np.full(2000, np.pi)
+    share = (np.arange(2000) + 0.5) / 2000 - 0.5
+    for _ in range(60):
+        middle = (low + high) / 2
+        series = np.sin(np.outer(middle, j)) @ (2 * moment(j) / j)
+        below = (middle + series) / (2 * np.pi) < share
+        low, high = np.where(below, middle, low), np.where(below, high, middle)
+    cosine, sine = order_parameter(jnp.asarray((low + high) / 2))
+    assert abs(cosine - expected) < 1e-12 and abs(sine) < 1e-12
+
+
+@jax.jit
+def pulls(phases, strength):
+    """What a unit at each phase feels of one at phase 0, on which nothing acts."""
+    params = KuramotoParams([0.0, 0.0], strength * jnp.array([[0.0, 1.0], [0.0, 0.0]]))
+    one = lambda x: kuramoto(0.0, jnp.stack([x, 0 * x])[None], params)[0, 0]
+    return jax.vmap(one)(phases)
+
+
+def test_beat_by_quadrature():
+    # Adler 1946, as above: the time of a turn is the integral of 1 / phi' over the phase.
+    rate = 1.3 + np.asarray(pulls(2 * jnp.pi * jnp.arange(200.0) / 200, 1.0))
+    assert abs(2 * np.pi * np.mean(1 / rate) - 7.5640662330079) < 1e-12
+
+
+NODES, WEIGHTS = np.polynomial.legendre.leggauss(200)
+
+
+def locked_order(density, strength):
+    """Order parameter of the locked units, all under a mean field of this strength at phase 0.
+
+    The frequency held at a phase is the one that the pull there cancels.
+    """
+    phase = np.pi / 2 * NODES
+    frequency = lambda x: -pulls(x, strength)
+    held, slope = jax.jvp(frequency, (jnp.asarray(phase),), (jnp.ones(200),))
+    return np.pi / 2 * np.sum(WEIGHTS * np.cos(phase) * density(np.asarray(held)) * slope)
+
+
+LAWS = {
+    "Lorentzian": lambda w: 0.5 / np.pi / (w**2 + 0.25),
+    "Gaussian": lambda w: np.exp(-(w**2) / 2) / np.sqrt(2 * np.pi),
+    "uniform": lambda w: np.where(np.abs(w) <= 1, 0.5, 0.0),
+}
+
+
+# Half-width 0.5, standard deviation 1, [-1, 1]: 2 / (pi density(0)); Kuramoto 1975; Strogatz 2000,
+# Physica D 143 (from memory).
+@pytest.mark.parametrize(
+    "law, onset", [("Lorentzian", 1.0), ("Gaussian", 1.595769121606), ("uniform", 1.273239544735)]
+)
+def test_onset_of_a_population_without_end(law, onset):
+    r = 1e-5
+    assert abs(onset * locked_order(LAWS[law], onset * r) / r - onset) < 1e-8
+
+
+def test_order_of_a_population_without_end():
+    # Gaussian, K = 2: 1 = K sqrt(pi/8) e^-x (I0(x) + I1(x)), x = K^2 r^2 / 4; Kuramoto 1975, the
+    # Bessel form derived. Lorentzian as above. The drifting units cancel each other.
+    for law, known in (("Gaussian", 0.715173956683), ("Lorentzian", 0.7071067811865)):
+        excess = lambda r, law=law: locked_order(LAWS[law], 2 * r) - r
+        found: Any = scipy.optimize.brentq(excess, 0.5, 0.9, xtol=1e-13)
+        assert abs(found - known) < 1e-10
+    # Uniform on [-1, 1] at its onset 4 / pi: Pazo 2005, Phys. Rev. E 72 (from memory). It jumps to
+    # pi / 4: so far all units are locked and any order holds itself, beyond it too few are.
+    uniform = lambda r: locked_order(LAWS["uniform"], 4 / np.pi * r)
+    assert abs(uniform(np.pi / 4) - 0.7853981634) < 1e-10
+    assert abs(uniform(0.4) - 0.4) < 1e-10
+    assert uniform(0.9) < 0.88
+
+
+def test_order_of_identical_units_with_noise():
+    # Phase noise sqrt(2 D) xi: r = I1(K r / D) / I0(K r / D), here K = 2, D = 0.6; onset K = 2 D;
+    # Sakaguchi 1988 (from memory). The stationary density is e^(integral of the pull / D).
+    phase = 2 * np.pi * np.arange(64) / 64
+    inside = np.outer(phase, (NODES + 1) / 2)
+
+    def order(strength):
+        pull = np.asarray(pulls(jnp.asarray(inside.ravel()), strength)).reshape(inside.shape)
+        density = np.exp(phase / 2 * (pull @ WEIGHTS) / 0.6)
+        return np.sum(density * np.cos(phase)) / np.sum(density)
+
+    assert abs(order(2 * 0.77312962537) - 0.77312962537) < 1e-8
+    assert abs(order(1.2 * 1e-5) / 1e-5 - 1) < 1e-8
