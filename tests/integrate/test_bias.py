@@ -1,9 +1,12 @@
 """What a step makes of a linear noisy oscillator, against closed forms."""
 
+from typing import Any
+
 import jax
 import jax.numpy as jnp
 import numpy as np
 import pytest
+import scipy.optimize
 
 from oscillib.fields import HopfNetwork, HopfParams
 from oscillib.integrate import (
@@ -30,7 +33,8 @@ def unit(a, w, s):
 def test_euler_maruyama_on_a_damped_unit():
     out = step_bias(euler_maruyama(FIELD), unit(-0.2, W, 0.02), 0.1)
     # Closed form s^2 h / (1 - |1 + h(a + iw)|^2), instead of s^2 / 2|a| = 0.001.
-    np.testing.assert_allclose(out.variance, 0.0010359194835712863, rtol=0, atol=1e-15)
+    # Its denominator cancels to 4e-3 of its terms: rounding is some hundred times the value's.
+    np.testing.assert_allclose(out.variance, 0.0010359194835712863, rtol=0, atol=1e-14)
     factor = 1 + 0.1 * (-0.2 + 1j * W)
     np.testing.assert_allclose(out.growth, np.log(abs(factor)) / 0.1, rtol=0, atol=1e-14)
     np.testing.assert_allclose(out.frequency, np.angle(factor) / 0.1, rtol=0, atol=1e-14)
@@ -66,6 +70,25 @@ def test_steps_without_noise():
     assert step_bias(rk4(FIELD), params, 0.1).variance == 0
     polynomial = 1 - 0.1 + 0.1**2 / 2 - 0.1**3 / 6 + 0.1**4 / 24
     np.testing.assert_allclose(step_bias(rk4(FIELD), params, 0.1).growth, np.log(polynomial) / 0.1)
+
+
+def test_amplitude_factors_of_a_rotation():
+    # |R|^2 of a turn of 0.1 rad: 1 + h^2 by the explicit Euler step, 1 by an exact one; closed form.
+    square = lambda step, params: np.exp(2 * 0.1 * step_bias(step, params, 0.1).growth)
+    assert abs(square(without_noise(euler_maruyama(FIELD)), unit(0.0, 1.0, 0.0)) - 1.01) < 1e-14
+    exact = lambda p, h: lambda t, y: FIELD.linear_flow(p, h)(y)
+    assert abs(square(exact, HopfParams([0.0], [1.0])) - 1) < 1e-14
+
+
+@pytest.mark.parametrize(
+    "growth, frequency, limit", [(-1.0, 0.0, 2.785293563405), (0.0, 1.0, 2.828427124746)]
+)
+def test_stability_limits_of_rk4(growth, frequency, limit):
+    # On the real and on the imaginary axis, 2 sqrt(2); textbook.
+    params = HopfParams([growth], [frequency])
+    gain = jax.jit(lambda h: step_bias(rk4(FIELD), params, h).growth)
+    found: Any = scipy.optimize.brentq(lambda h: gain(jnp.asarray(h)), 2.6, 3.0, xtol=1e-13)
+    assert abs(found - limit) < 1e-10
 
 
 def test_noise_in_the_middle_of_a_runge_kutta_step():

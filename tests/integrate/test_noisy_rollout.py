@@ -107,6 +107,15 @@ def test_stationary_amplitude_at_a_step_where_euler_maruyama_is_wrong():
     assert (wrong**2).mean() > 2 * exact2
 
 
+def test_stationary_amplitude_above_onset():
+    # Fokker-Planck closed form for a=0.5, b=1, s=0.5 (Risken 1989; from memory), at the tolerance
+    # 0.006: four standard errors of 70,000 paths. Turning does not matter.
+    r2 = np.abs(ensemble(STRANG, unit(0.5, 2.0, 0.5), 0.05, steps=160, paths=70_000,
+                         key=jax.random.key(0))) ** 2  # fmt: skip
+    assert 4 * np.sqrt((0.5718999927 - 0.6437999855**2) / 70_000) < 0.006
+    assert abs(r2.mean() - 0.64379999) < 0.006
+
+
 @pytest.mark.long
 @pytest.mark.parametrize(
     ("a", "s", "exact2", "exact4"),

@@ -5,13 +5,14 @@ import jax.numpy as jnp
 import numpy as np
 import pytest
 
-from oscillib.fields import HopfNetwork, HopfParams
+from oscillib.fields import HopfNetwork, HopfParams, LinearNetwork, LinearParams
 from oscillib.integrate import (
     NoisyParams,
     euler_maruyama,
     linear_transition,
     noisy_strang,
     rk4,
+    rollout,
     split_noise,
     without_noise,
 )
@@ -72,6 +73,49 @@ def test_weak_order_by_regression(name, order):
     # Differences of successive values fall with the order of the error itself.
     slope = -np.polyfit(np.log(counts[:-1]), np.log(np.abs(np.diff(values))), 1)[0]
     assert abs(slope - order) < 0.1
+
+
+def test_euler_without_noise_is_of_order_1():
+    # Textbook (Hairer, Lubich & Wanner 2006; from memory); slope 0.95458 computed apart.
+    counts, params = np.array([64, 128, 256, 512]), unit(0.4, 3.0, 0.0)
+
+    @jax.jit
+    def end(h, count):
+        advance = without_noise(STEPS["euler"])(params, h)
+        start = jnp.array([[0.2], [0.1]])
+        return jax.lax.fori_loop(0, count, lambda _, y: advance(0.0, y), start)
+
+    # Closed form to 40 digits; common practice.
+    exact = np.array([[0.55491488485800019834], [-0.057203871761378918795]])
+    errors = [np.linalg.norm(end(jnp.asarray(4 / n), jnp.asarray(n)) - exact) for n in counts]
+    assert abs(-np.polyfit(np.log(counts), np.log(errors), 1)[0] - 1) < 0.25
+
+
+def test_mean_of_euler_maruyama_on_a_linear_drift():
+    # (1 + mu h)^n, mu = 0.7, h = 1/16, n = 16; closed form.
+    quiet = without_noise(euler_maruyama(LinearNetwork(), rate=LinearNetwork().noise_rate))
+    params = NoisyParams(LinearParams.relaxing([-0.7]), jnp.array([[0.5]]))
+    end = rollout(quiet, params, jnp.ones((1, 1)), 1 / 16, 16)[-1, 0, 0]
+    assert abs(end - 1.984009813) < 1e-9
+
+
+def test_strong_order_of_euler_maruyama_with_additive_noise():
+    # dx = sin 2x dt + 0.4 dW: order 1, as additive noise leaves no other term; Kloeden & Platen
+    # 1992 (from memory), slope 1.012 computed apart. One path, seen by steps of every length.
+    step = euler_maruyama(lambda t, y, p: jnp.sin(2 * y), rate=lambda noise: jnp.diag(noise**2))
+    params, finest = NoisyParams(None, jnp.array([0.4])), 2048
+    draws = jax.random.normal(jax.random.key(0), (400, finest)) / np.sqrt(finest)
+
+    def ends(count):
+        advance = step(params, jnp.asarray(1 / count))
+        scale = jnp.sqrt(advance.covariance[0, 0] * count)
+        move = lambda y, w: (advance.after(0.0, advance.into_noise(0.0, y) + scale * w), None)
+        one = lambda w: jax.lax.scan(move, jnp.array([0.5]), w)[0]
+        return jax.jit(jax.vmap(one))(draws.reshape(400, count, -1).sum(axis=2))
+
+    counts, exact = np.array([16, 64]), ends(finest)
+    errors = [np.mean(np.abs(ends(n) - exact)) for n in counts]
+    assert abs(-np.polyfit(np.log(counts), np.log(errors), 1)[0] - 1) < 0.15
 
 
 def test_exact_for_a_linear_network_at_any_step():

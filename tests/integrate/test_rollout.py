@@ -97,6 +97,28 @@ def test_reverse_mode_stores_one_state_a_step():
     assert compiled.memory_analysis().temp_size_in_bytes < 3 * 900 * 32
 
 
+def test_tangents_of_a_chaotic_run_grow_with_its_exponent():
+    # Lorenz 63: 0.9056 a time unit, hence 9.056 in the logarithm over 10; exponent of Sprott 2003
+    # (digits seen in public code). Mean over 600 runs, each of a standard deviation below 1.
+    field = lambda t, y, p: jnp.stack(
+        [10 * (y[1] - y[0]), y[0] * (28 - y[2]) - y[1], y[0] * y[1] - 8 / 3 * y[2]]
+    )
+    end = lambda y: rollout(rk4(field), None, y, 0.01, 1000)[-1]
+
+    @jax.jit
+    @jax.vmap
+    def grown(y, v):
+        y, v = jax.jvp(end, (y,), (v,))  # onto the attractor, along its most unstable direction
+        before = jnp.linalg.norm(v)
+        y, v = jax.jvp(end, (y,), (v / before,))
+        return jnp.log(jnp.linalg.norm(v))
+
+    start = RNG.normal(size=(2, 600, 3)) * np.array([[[8.0]], [[1.0]]]) + np.array([0, 0, 25.0])
+    growth = np.asarray(grown(*jnp.asarray(start)))
+    assert np.std(growth) / np.sqrt(600) < 0.04
+    assert abs(np.mean(growth) - 9.056) < 0.15
+
+
 def test_array_of_equal_steps_is_the_scalar():
     params, y0 = PLACE
     scalar = rollout(STEP["rk4"], params, y0, 0.2, STEPS)
