@@ -141,6 +141,13 @@ def test_keys_differ_by_recording_window_and_step():
     assert len({tuple(np.asarray(jax.random.key_data(k))) for k in keys}) == 8
 
 
+@pytest.fixture(scope="module")
+def inward():
+    """Rate of the radius, at radii of one Hopf unit."""
+    along = lambda r, p: HopfNetwork()(0.0, jnp.stack([r, 0 * r])[:, None], p)[0, 0]
+    return jax.jit(lambda p, radii: jax.vmap(along, (0, None))(radii, p))
+
+
 # Fokker-Planck closed form, b = 1 (e.g. Risken 1989, laser model; from memory): r^2 is a normal
 # N(a, s^2) cut at 0, and <r^4> = a <r^2> + s^2.
 @pytest.mark.parametrize(
@@ -154,18 +161,16 @@ def test_keys_differ_by_recording_window_and_step():
         (1.0, 0.3, 1.000462882303, 1.090462882303),
     ],
 )
-def test_stationary_radius_of_field_and_noise_together(a, s, square, fourth):
+def test_stationary_radius_of_field_and_noise_together(inward, a, s, square, fourth):
     # The density is r e^(integral of 2 F / Q), F the field along a radius, Q the rate of the noise.
     # It pins the convention: a noise of s per root of time in each component.
     nodes, weights = np.polynomial.legendre.leggauss(120)
     top = np.sqrt(max(a, 0) + 9 * s)
     radius = top * (nodes + 1) / 2
     inside = radius[:, None] * (nodes + 1) / 2
-    y = jnp.asarray(np.stack([inside.ravel(), 0 * inside.ravel()]))
-    like = np.ones(inside.size)
-    inward = HopfNetwork()(0.0, y, HopfParams(a * like, 5 * like))[0].reshape(inside.shape)
     rate = planar_rate(jnp.array([s]))[0, 0]
-    exponent = 2 * radius / 2 * (np.asarray(inward) @ weights) / rate
+    drift = np.asarray(inward(HopfParams([a], [5.0]), inside.ravel())).reshape(inside.shape)
+    exponent = 2 * radius / 2 * (drift @ weights) / rate
     density = weights * radius * np.exp(exponent - np.max(exponent))
     moment = lambda power: np.sum(density * radius**power) / np.sum(density)
     np.testing.assert_allclose([moment(2), moment(4)], [square, fourth], rtol=0, atol=1e-12)

@@ -108,7 +108,7 @@ def test_strong_order_of_euler_maruyama_with_additive_noise():
 
     def ends(count):
         advance = step(params, jnp.asarray(1 / count))
-        scale = jnp.sqrt(advance.covariance[0, 0] * count)
+        scale = jnp.sqrt(advance.covariance[0, 0] * float(count))
         move = lambda y, w: (advance.after(0.0, advance.into_noise(0.0, y) + scale * w), None)
         one = lambda w: jax.lax.scan(move, jnp.array([0.5]), w)[0]
         return jax.jit(jax.vmap(one))(draws.reshape(400, count, -1).sum(axis=2))

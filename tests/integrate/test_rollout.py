@@ -99,7 +99,7 @@ def test_reverse_mode_stores_one_state_a_step():
 
 def test_tangents_of_a_chaotic_run_grow_with_its_exponent():
     # Lorenz 63: 0.9056 a time unit, hence 9.056 in the logarithm over 10; exponent of Sprott 2003
-    # (digits seen in public code). Mean over 600 runs, each of a standard deviation below 1.
+    # (digits seen in public code). Single runs scatter by 1.8.
     field = lambda t, y, p: jnp.stack(
         [10 * (y[1] - y[0]), y[0] * (28 - y[2]) - y[1], y[0] * y[1] - 8 / 3 * y[2]]
     )
@@ -108,14 +108,16 @@ def test_tangents_of_a_chaotic_run_grow_with_its_exponent():
     @jax.jit
     @jax.vmap
     def grown(y, v):
-        y, v = jax.jvp(end, (y,), (v,))  # onto the attractor, along its most unstable direction
-        before = jnp.linalg.norm(v)
-        y, v = jax.jvp(end, (y,), (v / before,))
+        # Onto the attractor, which takes long from near a fixed point; then along its most unstable
+        # direction.
+        y = jax.lax.fori_loop(0, 6, lambda _, y: end(y), y)
+        y, v = jax.jvp(end, (y,), (v,))
+        y, v = jax.jvp(end, (y,), (v / jnp.linalg.norm(v),))
         return jnp.log(jnp.linalg.norm(v))
 
-    start = RNG.normal(size=(2, 600, 3)) * np.array([[[8.0]], [[1.0]]]) + np.array([0, 0, 25.0])
-    growth = np.asarray(grown(*jnp.asarray(start)))
-    assert np.std(growth) / np.sqrt(600) < 0.04
+    start, way = np.random.default_rng(1).normal(size=(2, 2000, 3))
+    growth = np.asarray(grown(jnp.asarray(8 * start + [0.0, 0.0, 25.0]), jnp.asarray(way)))
+    assert np.std(growth) / np.sqrt(2000) < 0.05
     assert abs(np.mean(growth) - 9.056) < 0.15
 
 

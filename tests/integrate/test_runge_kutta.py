@@ -129,10 +129,10 @@ def conserved():
 
     @jax.jit
     def run(end, count):
-        advance = rk4(conservative)(None, end / count)
+        advance = rk4(conservative)(None, end / count.astype(end.dtype))
         return lax.fori_loop(0, count, lambda _, y: advance(0.0, y), start)
 
-    return lambda end, count: np.asarray(run(jnp.asarray(end), jnp.asarray(float(count))))
+    return lambda end, count: np.asarray(run(jnp.asarray(end), jnp.asarray(count)))
 
 
 def test_known_periods_and_solutions(conserved):
