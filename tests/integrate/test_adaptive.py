@@ -4,7 +4,7 @@ import jax.numpy as jnp
 import numpy as np
 import pytest
 
-from oscillib.fields import HopfNetwork, HopfParams
+from oscillib.fields import HopfNetwork, HopfParams, VanDerPolParams, van_der_pol
 from oscillib.integrate import adaptive_rollout
 
 
@@ -46,6 +46,63 @@ def test_irregular_absolute_times():
     expected = np.exp(np.sin(times) - np.sin(3.0))
     np.testing.assert_allclose(out.states[:, 1], expected, rtol=1e-9)
     assert out.success
+
+
+def robertson(t, y, p):
+    slow, fast = 0.04 * y[0] - 1e4 * y[1] * y[2], 3e7 * y[1] ** 2
+    return jnp.stack([-slow, slow - fast, fast])
+
+
+def hires(t, y, p):
+    a, b, c, d, e, f, g, h = y
+    meet, part = 280 * f * h, 1.81 * g
+    return jnp.stack(
+        [
+            -1.71 * a + 0.43 * b + 8.32 * c + 0.0007, 1.71 * a - 8.75 * b,
+            -10.03 * c + 0.43 * d + 0.035 * e, 8.32 * b + 1.71 * c - 1.12 * d,
+            -1.745 * e + 0.43 * f + 0.43 * g,
+            -meet + 0.69 * d + 1.71 * e - 0.43 * f + 0.69 * g, meet - part, part - meet,
+        ]
+    )  # fmt: skip
+
+
+def oregonator(t, y, p):
+    a, b, c = y
+    return jnp.stack(
+        [77.27 * (b + a * (1 - 8.375e-6 * a - b)), (c - (1 + a) * b) / 77.27, 0.161 * (a - c)]
+    )
+
+
+# Test Set for IVP Solvers (Mazzia & Magherini, Bari; formerly CWI): ends as in the set's source. That
+# of van der Pol's oscillator, eps = 1e-6 at t = 2, is here in the time of mu = 1000.
+STIFF = {
+    "Robertson": (robertson, None, [1.0, 0, 0], 1e11, [2.083340149701255e-08,
+                  8.333360770334713e-14, 0.999999979166505], 1e-13, 1e-9),
+    "HIRES": (hires, None, [1.0, 0, 0, 0, 0, 0, 0, 0.0057], 321.8122, [0.0007371312573325668,
+              0.0001442485726316185, 5.888729740967575e-05, 0.001175651343283149,
+              0.002386356198831331, 0.006238968252742796, 0.002849998395185769,
+              0.002850001604814231], 1e-13, 1e-11),
+    "van der Pol": (van_der_pol, VanDerPolParams(1000.0), [2.0, 0], 2000.0,
+                    [1.706167732170483, -0.8928097010247975e-3], 1e-13, 1e-9),
+    "Oregonator": (oregonator, None, [1.0, 2, 3], 360.0,
+                   [1.000814870318523, 1228.178521549917, 132.0554942846706], 1e-10, 1e-6),
+}  # fmt: skip
+
+
+@pytest.mark.long
+@pytest.mark.parametrize("name", STIFF)
+def test_an_implicit_solver_finds_the_ends_of_stiff_problems(name):
+    field, params, start, end, expected, atol, tolerance = STIFF[name]
+    out = jax.jit(
+        lambda y: adaptive_rollout(
+            field, params, y, jnp.array([0.0, end]), rtol=max(1e-11, atol), atol=atol,
+            solver=diffrax.Kvaerno5(), max_steps=200_000,
+        )
+    )(jnp.array(start))  # fmt: skip
+    assert out.success
+    np.testing.assert_allclose(out.states[-1], expected, rtol=0, atol=tolerance)
+    # Some entries are far below the others.
+    np.testing.assert_allclose(out.states[-1], expected, rtol=1e-8)
 
 
 def test_success_is_false_where_the_run_fails():
