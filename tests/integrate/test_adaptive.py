@@ -73,11 +73,11 @@ def oregonator(t, y, p):
     )
 
 
-# Test Set for IVP Solvers (Mazzia & Magherini, Bari; formerly CWI): ends as in the set's source. That
-# of van der Pol's oscillator, eps = 1e-6 at t = 2, is here in the time of mu = 1000.
+# Test Set for IVP Solvers (Mazzia & Magherini, Bari; formerly CWI): ends as in the set's source.
+# That of van der Pol's oscillator, eps = 1e-6 at t = 2, is here in the time of mu = 1000.
 STIFF = {
     "Robertson": (robertson, None, [1.0, 0, 0], 1e11, [2.083340149701255e-08,
-                  8.333360770334713e-14, 0.999999979166505], 1e-13, 1e-9),
+                  8.333360770334713e-14, 0.999999979166505], 1e-20, 1e-9),
     "HIRES": (hires, None, [1.0, 0, 0, 0, 0, 0, 0, 0.0057], 321.8122, [0.0007371312573325668,
               0.0001442485726316185, 5.888729740967575e-05, 0.001175651343283149,
               0.002386356198831331, 0.006238968252742796, 0.002849998395185769,
