@@ -8,7 +8,7 @@ import numpy as np
 import pytest
 import scipy.stats
 
-from oscillib.fields import HopfNetwork, HopfParams
+from oscillib.fields import HopfNetwork, HopfParams, LinearNetwork, LinearParams
 from oscillib.integrate import (
     NoisyParams,
     euler_maruyama,
@@ -87,6 +87,25 @@ def test_equals_the_dense_normal_with_missing_samples_at_irregular_times(
     quadratic = (data - expected) @ np.linalg.solve(total, data - expected)
     np.testing.assert_allclose(jnp.sum(out.residuals**2), quadratic, rtol=1e-10)
     assert not np.any(np.asarray(out.residuals)[~mask])
+
+
+def test_local_level_of_the_nile():
+    # Annual flow 1871-1970 as a random walk seen through noise. At the variances 15,099 and 1,469.1
+    # (Durbin & Koopman 2012, section 2.10, from memory) the likelihood of all but the first value,
+    # which a vague start takes up, is -632.5456 (seen in public tests).
+    from statsmodels.datasets import nile
+
+    table: Any = nile.load_pandas().data
+    values = jnp.asarray(table["volume"].to_numpy(float))[:, None]
+    field = LinearNetwork()
+    step = noisy_strang(field.saturation_flow, field.linear_matrix, rate=field.noise_rate)
+    walk = NoisyParams(LinearParams.relaxing([0.0]), jnp.sqrt(jnp.array([[1469.1]])))
+    params = StateSpaceParams(walk, ReadoutParams([1.0]), jnp.sqrt(jnp.array([15099.0])))
+    out = gaussian_filter(
+        step, linear_readout, params, values, jnp.ones_like(values, bool), h=1.0,
+        start=wide_start((1, 1), 1e6),
+    )  # fmt: skip
+    assert abs(jnp.sum(out.contributions[1:]) + 632.5456) < 1e-4
 
 
 @pytest.mark.parametrize("missing", [False, True])

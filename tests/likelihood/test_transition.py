@@ -9,9 +9,25 @@ import pytest
 import scipy.linalg
 import scipy.stats
 
-from oscillib.fields import HopfNetwork, HopfParams
-from oscillib.integrate import NoisyParams, euler_maruyama, noisy_rollout, rk4, split_noise
+from oscillib.fields import (
+    HopfNetwork,
+    HopfParams,
+    KuramotoParams,
+    LinearNetwork,
+    LinearParams,
+    kuramoto,
+)
+from oscillib.fitting import Status, observed_information, refine
+from oscillib.integrate import (
+    NoisyParams,
+    euler_maruyama,
+    noisy_rollout,
+    noisy_strang,
+    rk4,
+    split_noise,
+)
 from oscillib.likelihood import transition_log_density
+from oscillib.parameters import Free
 
 
 FIELD = HopfNetwork()
@@ -99,6 +115,76 @@ def test_euler_maruyama_and_the_splitting_agree_at_short_intervals(step):
     ours = jnp.sum(series(step, params, states, 1e-3))
     theirs = jnp.sum(series(euler_maruyama(FIELD), params, states, 1e-3))
     assert abs(ours - theirs) < 0.5
+
+
+OU = LinearNetwork()
+EULER = euler_maruyama(OU, rate=OU.noise_rate)
+EXACT = noisy_strang(OU.saturation_flow, OU.linear_matrix, rate=OU.noise_rate)
+
+
+def relaxing(rate, noise):
+    return NoisyParams(LinearParams.relaxing(rate[None]), noise[None, None])
+
+
+@pytest.mark.parametrize("step, limit", [(EULER, 0.9559084465), (EXACT, 1.3)])
+def test_rate_that_the_density_of_a_step_leads_to(step, limit):
+    # Exactly sampled relaxation at the rate 1.3 every 0.5: Euler's density is best at
+    # (1 - e^(-rate h)) / h; closed form. The mean over all pairs of samples is by quadrature.
+    rate, noise, h = jnp.asarray(1.3), jnp.asarray(0.7), 0.5
+    nodes, weights = np.polynomial.hermite_e.hermegauss(6)
+    advance = EXACT(relaxing(rate, noise), jnp.asarray(h))
+    first = jnp.asarray(nodes * np.sqrt(0.7**2 / 2.6))
+    carried = jax.vmap(lambda x: advance.into_noise(0.0, x[None, None])[0, 0])(first)
+    second = carried[:, None] + jnp.sqrt(advance.covariance[0, 0]) * jnp.asarray(nodes)[None]
+    pairs = jnp.stack(jnp.broadcast_arrays(first[:, None], second), axis=-1).reshape(36, 2, 1, 1)
+
+    @jax.jit
+    def loss(x):
+        params = relaxing(*jnp.exp(x))
+        one = lambda states: transition_log_density(step, params, states, h=h)[0]
+        return -jnp.asarray(np.outer(weights, weights).ravel()) @ jax.vmap(one)(pairs)
+
+    found = refine(loss, jnp.log(jnp.array([1.0, 1.0])), Free(), tolerance=1e-16).params
+    assert abs(jnp.exp(found[0]) - limit) < 1e-7
+
+
+@pytest.mark.parametrize("count", [5, 40])
+def test_information_on_the_frequency_of_a_diffusing_phase(count):
+    # phi' = w + sqrt(2 D) xi over T: the end points say all, var(w) = 2 D / T at any sampling;
+    # closed form. D = 0.02, T = 50.
+    step = euler_maruyama(kuramoto, rate=lambda noise: jnp.diag(noise**2))
+    phases = jnp.asarray(np.random.default_rng(0).normal(size=(count + 1, 1, 1)))
+
+    def loss(w):
+        params = NoisyParams(KuramotoParams(w[None]), jnp.sqrt(jnp.array([0.04])))
+        return -jnp.sum(transition_log_density(step, params, phases, h=50 / count))
+
+    information = jax.jit(lambda w: observed_information(loss, w, Free()))(jnp.asarray(1.0))
+    assert abs(1 / information[0, 0] - 0.0008) < 1e-12
+
+
+@pytest.mark.long
+def test_bias_of_the_rate_of_a_short_record():
+    # With a known mean of 0, the estimated rate is too high by about 2/T, here 0.1 at T = 20 and a
+    # rate of 1; Tang & Chen 2009, J. Econometrics (leading term; from memory).
+    truth = jnp.zeros(2)
+
+    @jax.jit
+    @jax.vmap
+    def fit(key):
+        start, noise = jax.random.split(key)
+        y0 = jnp.sqrt(0.5) * jax.random.normal(start, (1, 1))
+        states = noisy_rollout(EXACT, relaxing(*jnp.exp(truth)), y0, 0.05, 400, key=noise)
+        loss = lambda x: (
+            -jnp.sum(transition_log_density(EXACT, relaxing(x[0], jnp.exp(x[1])), states, h=0.05))
+        )
+        out = refine(loss, jnp.array([1.0, 0.0]), Free())
+        return out.params[0], out.status
+
+    rate, status = fit(jax.random.split(jax.random.key(0), 4000))
+    assert np.mean(status == Status.CONVERGED) > 0.999
+    assert np.std(rate) / np.sqrt(4000) < 0.006
+    assert abs(np.mean(rate) - 1.1) < 0.025
 
 
 @pytest.mark.usefixtures("user_errors")
