@@ -80,6 +80,20 @@ def test_german_economy_as_statsmodels_has_it(germany, german_model):
     )
 
 
+def test_variance_and_correlations_of_an_oscillation():
+    # AR(2) with 1.318 and -0.634: rho_1 = f1 / (1 - f2), rho_2 = f1 rho_1 + f2 and the variance
+    # (1 - f2) / ((1 + f2) ((1 - f2)^2 - f1^2)); closed form, Box & Jenkins's fit to the sunspots
+    # (coefficients from memory). Three channels hold the last three samples of one.
+    step = jnp.array([[1.318, -0.634, 0.0], [1.0, 0.0, 0.0], [0.0, 1.0, 0.0]])
+    shock = jnp.zeros((3, 3)).at[0, 0].set(1.0)
+    model = Autoregression(jnp.zeros(3), step[None], shock, jnp.zeros(3))
+    far = forecast_covariance(model, 120)[-1]
+    np.testing.assert_allclose(far[0, 0], 4.7859431005, rtol=0, atol=1e-9)
+    np.testing.assert_allclose(
+        far[0, 1:] / far[0, 0], [0.80660954712, 0.42911138311], rtol=0, atol=1e-9
+    )
+
+
 def test_sunspots():
     # Conditional least squares by statsmodels: AutoReg(y, lags=9, trend="c").fit().params.
     from statsmodels.datasets import sunspots

@@ -98,6 +98,16 @@ def test_crps_is_the_integral_that_defines_it():
     np.testing.assert_allclose(out, integral, rtol=1e-8)
 
 
+def test_expected_crps_of_the_true_law():
+    # Half the mean distance of two draws, which of a normal law is 2 s / sqrt(pi), 1.1283791671 at
+    # s = 1; closed form (Gneiting & Raftery 2007, section 4.2).
+    nodes, weights = np.polynomial.legendre.leggauss(100)
+    target = jnp.asarray(9 * nodes)
+    score = crps_gaussian(jnp.zeros(100), jnp.ones(100), target)
+    mean = 9 * np.sum(weights * scipy.stats.norm.pdf(target) * score)
+    assert abs(2 * mean - 2 / np.sqrt(np.pi)) < 1e-12
+
+
 def test_interval_score_penalises_misses():
     out = interval_score(
         jnp.zeros(4), 2 * jnp.ones(4), jnp.array([1.0, -0.5, 3.0, jnp.nan]), level=0.8

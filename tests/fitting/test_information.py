@@ -1,3 +1,5 @@
+from functools import partial
+
 import jax
 import jax.numpy as jnp
 import numpy as np
@@ -9,7 +11,7 @@ from oscillib.fitting import (
     observed_information,
     outer_product_information,
 )
-from oscillib.parameters import Positive
+from oscillib.parameters import Free, Positive
 
 
 CONSTRAINTS = {"decay": Positive(), "size": Positive(), "spread": Positive()}
@@ -95,6 +97,49 @@ def test_observed_is_expected_where_residuals_vanish(expected):
     low = lambda p: loss({k: v.astype(jnp.float64) for k, v in p.items()}, y).astype(jnp.float32)
     out = jax.eval_shape(lambda p: observed_information(low, p, CONSTRAINTS), single)
     assert out.dtype == jnp.float32
+
+
+TONE = {"amplitude": Free(), "frequency": Free(), "phase": Free()}
+
+
+def tone(params, t):
+    angle = params["frequency"] * t + params["phase"]
+    return params["amplitude"] * jnp.stack([jnp.cos(angle), jnp.sin(angle)])
+
+
+@pytest.fixture(scope="module")
+def bounds():
+    """Least variances of amplitude, frequency and phase of a tone, real or complex."""
+
+    @partial(jax.jit, static_argnames="parts")
+    def find(frequency, t, variance, parts):
+        params = {"amplitude": jnp.asarray(1.3), "frequency": frequency, "phase": jnp.asarray(0.4)}
+        see = lambda p: tone(p, t)[:parts].ravel()
+        return jnp.linalg.inv(fisher_gaussian(see, params, TONE, variance)).diagonal()
+
+    return lambda *args, parts: np.asarray(find(*map(jnp.asarray, args), parts=parts))
+
+
+def test_bound_of_the_frequency_of_a_tone(bounds):
+    # Rife & Boorstyn 1974; Kay 1993 (from memory); A = 1.3, s = 0.5, w = 0.9, 64 samples. For a
+    # real tone 24 s^2 / (A^2 n (n^2 - 1)) is 3 percent low at this phase; the exact value was
+    # computed apart.
+    t, asymptotic = jnp.arange(64.0), 24 * 0.25 / (1.69 * 64 * (64**2 - 1))
+    real = bounds(0.9, t, 0.25, parts=1)[1]
+    assert abs(real / 1.39779392e-05 - 1) < 1e-8
+    assert abs(real / asymptotic - 1.03184) < 1e-5
+    # Of a complex one half of that is exact, and s^2 / n that of the amplitude.
+    complex_ = bounds(0.9, t, 0.25, parts=2)
+    np.testing.assert_allclose(complex_[1], 6.77330558987e-06, rtol=0, atol=1e-14)
+    np.testing.assert_allclose(complex_[0], 0.00390625, rtol=0, atol=1e-14)
+
+
+def test_bound_of_the_frequency_in_continuous_time(bounds):
+    # White noise of two-sided density S on [0, T]: var(w) >= 24 S / (A^2 T^3), the limit of the
+    # above; T = 10, S = 0.01, w = 6. A sample of an interval h has the variance S / h.
+    h = 10 / 4000
+    t = h * (jnp.arange(4000.0) + 0.5)
+    assert abs(bounds(6.0, t, 0.01 / h, parts=1)[1] / (24 * 0.01 / (1.69 * 1000)) - 1.0083) < 1e-4
 
 
 def test_errors_name_what_is_wrong(user_errors):

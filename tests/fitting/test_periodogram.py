@@ -74,6 +74,17 @@ def test_tone_on_a_fourier_bin(compiled):
     np.testing.assert_allclose(got.offset[8], 4.0, rtol=1e-12)
 
 
+def test_peak_and_total_of_a_tone():
+    # 1.7 cos on the bin 20 of 256 samples at 50 a time unit: A^2 n / 4 (Scargle 1982), the peak
+    # A^2 n / (2 * 50) of a one-sided density and the power A^2 / 2 (Parseval); closed forms.
+    times = np.arange(256) / 50
+    values = 1.7 * np.cos(2 * np.pi * 20 * np.arange(256) / 256)[:, None]
+    got = periodogram(times, values, np.ones((256, 1), bool), 2 * np.pi * 50 / 256 * np.array([20]))
+    square, power = got.amplitude[0, 0] ** 2, got.power[0, 0] * values.var()
+    np.testing.assert_allclose(power * 256 / 2, 184.96, rtol=0, atol=1e-9)
+    np.testing.assert_allclose([square * 256 / 100, power], [7.3984, 1.445], rtol=0, atol=1e-10)
+
+
 def test_white_noise_power_is_beta_distributed(compiled):
     # Closed form: in white noise the power is Beta(1, (n - 3) / 2), of mean 2 / (n - 1).
     rng = np.random.default_rng(1)

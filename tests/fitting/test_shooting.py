@@ -208,6 +208,12 @@ def unstable(t, y, p):
     return jnp.stack([y[1], 3600 * y[0] - (3600 + p**2) * jnp.sin(p * t)])
 
 
+def test_unstable_problem_before_its_error_has_grown():
+    # sin(pi t) and its slope at t = 0.25, where an error of the start has grown by e^15.
+    end = rollout(rk4(unstable), jnp.asarray(np.pi), jnp.array([0.0, np.pi]), 0.25 / 2000, 2000)[-1]
+    np.testing.assert_allclose(end, [0.7071067812, 2.221441469], rtol=0, atol=1e-4)
+
+
 def test_unstable_problem():
     times = jnp.linspace(0.0, 1.0, 21)
     exact = jnp.stack([jnp.sin(jnp.pi * times), jnp.pi * jnp.cos(jnp.pi * times)], axis=1)

@@ -46,6 +46,23 @@ def test_area_and_transfer(kernel):
         assert abs(abs(transfer) - gain) < 1e-8
 
 
+def test_area_and_transfer_by_quadrature():
+    # As above, to the digits of the closed forms; beyond 120 s nothing is left.
+    nodes, weights = np.polynomial.legendre.leggauss(200)
+
+    def integral(top, frequency=0.0):
+        t = top * (nodes + 1) / 2
+        wave = np.exp(-2j * np.pi * frequency * t)
+        return abs(top / 2 * np.sum(weights * wave * np.asarray(double_gamma(jnp.asarray(t)))))
+
+    assert abs(integral(120) - 5 / 6) < 1e-12
+    assert abs(integral(32) - 0.833443317088) < 1e-12
+    for frequency, gain in [(0.01, 0.86274484), (0.05, 0.8321468831), (0.1, 0.3595124705)]:
+        assert abs(integral(120, frequency) - gain) < 1e-9
+    z = 1 + 2j * np.pi * 0.01
+    assert abs(integral(120, 0.01) - abs(z**-6 - z**-16 / 6)) < 1e-12
+
+
 def test_auditory_shape():
     # Glover 1999, NeuroImage 9.
     compiled = jax.jit(lambda t: auditory_response(t[None])[0])

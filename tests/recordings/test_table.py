@@ -1,5 +1,7 @@
 """CSV files: exact round trip, and errors that name the place."""
 
+from importlib import resources
+
 import jax
 import numpy as np
 import pytest
@@ -50,6 +52,24 @@ def test_round_trip_in_single_precision(path):
         assert back.values.dtype == np.float32
         np.testing.assert_array_equal(back.nan_values, r.nan_values)
         np.testing.assert_array_equal(back.times, r.times)
+
+
+# Shapes and sums of the files in the wheel of statsmodels: of sunspots and nile from memory, of
+# elnino no second source.
+@pytest.mark.parametrize(
+    "name, shape, first, total",
+    [
+        ("sunspots", (309, 1), 1700.0, 15373.4),
+        ("nile", (100, 1), 1871.0, 91935.0),
+        ("elnino", (61, 12), 1950.0, 16903.80),
+    ],
+)
+def test_reads_real_files(name, shape, first, total):
+    data = resources.files("statsmodels") / "datasets" / name / f"{name}.csv"
+    with resources.as_file(data) as path:
+        r = read_csv(path)
+    assert r.values.shape == shape and bool(np.all(r.mask)) and r.times[0] == first
+    assert abs(np.sum(r.values) - total) < 1e-6
 
 
 def test_reads_what_people_write(path):
