@@ -95,7 +95,7 @@ def test_lorenz_96():
 def test_logistic_map():
     # ln 2: closed form (arcsine density). A map is a step like any other.
     step = lambda r, h: lambda t, y: r * y * (1 - y)
-    # A little below 4, where rounding cannot run into a fixed point.
+    # At 4 rounding could run into the fixed point 0; from here it does not.
     find = jax.jit(lambda r: lyapunov_spectrum(step, r, jnp.array([0.3123]), 1.0, 20000, every=1))
     np.testing.assert_allclose(find(4.0).exponents[0], np.log(2), atol=0.005)
 

@@ -119,8 +119,9 @@ def test_taper_spreads_a_tone_over_one_and_a_half_bins():
 
 def test_coherence_of_few_stretches():
     # Of L independent stretches without any relation: mean 1/L, and 1 - 0.05^(1/(L - 1)) is passed
-    # by 5 percent; Carter 1987, beta law (from memory); here L = 8.
-    draws = jnp.asarray(np.random.default_rng(0).normal(size=(4, 8 * 256, 30)))
+    # by 5 percent; Carter 1987, beta law (from memory); here L = 8. Units do not matter.
+    unit = np.logspace(-2, 2, 30)
+    draws = jnp.asarray(unit * np.random.default_rng(0).normal(size=(4, 8 * 256, 30)))
     estimate = lambda x: sample_spectrum(x, jnp.ones_like(x, bool), 256, interval=1.0).spectrum
     both = jax.jit(jax.vmap(lambda x: coherence(estimate(x))))(draws)
     # The taper relates neighbouring frequencies.
