@@ -323,10 +323,13 @@ def forecast_held_out(
         )
 
     # The bands hold what is unknown of the parameters too: the spread of the forecasts of draws.
-    model, drawn = jax.jit(lambda trees: (predict(params), jax.lax.map(predict, trees)))(
-        draw_params(params, fit, DRAWS)
-    )
-    ahead = jnp.mean((drawn.means - model.means[None]) ** 2, axis=0) + model.variances
+    # The fit goes through first, so that one compiled function does for it and the draws.
+    stack = lambda one, many: jnp.concatenate([jnp.asarray(one)[None], many])
+    trees = jax.tree.map(stack, params, draw_params(params, fit, DRAWS))
+    forecasts = jax.jit(lambda trees: jax.lax.map(predict, trees))(trees)
+    means, variances = forecasts.means[0], forecasts.variances[0]
+    off = forecasts.means[1:] - means[None]
+    band = NORMAL_90 * jnp.sqrt(variances + jnp.mean(off**2, axis=0))
     chosen = evaluate.choose_autoregression(
         values[: data.training], mask[: data.training],
         orders=(1, 2, 4, 8), ridges=(1e-4, 1e-2, 1.0), horizon=horizon,
@@ -338,12 +341,11 @@ def forecast_held_out(
     def error(predicted):
         return [number(e) for e in evaluate.error_by_horizon(predicted, truth, seen)]
 
-    band = NORMAL_90 * jnp.sqrt(ahead)
-    covered = evaluate.coverage(model.means - band, model.means + band, truth, seen)
+    covered = evaluate.coverage(means - band, means + band, truth, seen)
     report = {
         "steps": list(range(1, horizon + 1)),
         "origins": len(origins),
-        "model": error(model.means),
+        "model": error(means),
         "time_average": error(evaluate.time_average(values, mask, origins, horizon)),
         "persistence": error(evaluate.persistence(values, mask, origins, horizon)),
         "autoregression": error(regression),
@@ -351,7 +353,7 @@ def forecast_held_out(
         "autoregression_ridge": float(chosen.ridge),
         "coverage_90": [number(c) for c in covered],
     }
-    return {"report": report, "origin": int(origins[0]), "means": model.means[0], "band": band[0]}
+    return {"report": report, "origin": int(origins[0]), "means": means[0], "band": band[0]}
 
 
 def draw_params(params: Any, fit: dict, count: int) -> Any:
@@ -496,7 +498,8 @@ def table(report: dict) -> str:
         lines.append(f"{steps[k]:>12}{numbers}")
     off, weak = report["fit"]["standard_errors_off"], report["fit"]["weak_directions"]
     if off is None or off > 0.5:
-        lines += ["", f"the fit stopped {off} standard errors from its optimum: read no interval"]
+        far = "an unknown number of" if off is None else f"{off:.2g}"
+        lines += ["", f"the fit stopped {far} standard errors from its optimum: read no interval"]
     lines += ["weak directions: " + words for words in weak[:3]]
     if len(weak) > 3:
         lines += [f"and {len(weak) - 3} more weak directions: see the report"]

@@ -18,7 +18,8 @@ def pytest_configure(config):
     jax.config.update("jax_compilation_cache_dir", str(config.cache.mkdir("compiled")))
     jax.config.update("jax_persistent_cache_min_compile_time_secs", 0)
     jax.config.update("jax_persistent_cache_min_entry_size_bytes", -1)
-    # Short tests compile longer than they run; the long ones, and users, take the optimised code.
+    # Short tests compile longer than they run, so they take what compiles fastest: no optimisation,
+    # and the older code generator. The long ones, and users, take the optimised code.
     if config.option.markexpr == "not long":
         jax.config.update("jax_disable_most_optimizations", True)
         os.environ.setdefault("XLA_FLAGS", "--xla_cpu_use_fusion_emitters=false")

@@ -10,7 +10,8 @@ from jaxtyping import Array, Float
 
 from ..integrate import adaptive_rollout
 from ._failure import assert_close, fail
-from ._field import Field, State, Time, aside
+from ._field import Field, State, Time
+from ._tree import aside
 
 
 class Symmetry(NamedTuple):

@@ -12,6 +12,7 @@ from jaxtyping import Array, Float
 
 from ._derivative import check_derivatives
 from ._failure import assert_close, fail, named_leaves, same_type
+from ._tree import aside, cast, is_float, scaled
 
 
 Field = Callable[[Any, Any, Any], Any]
@@ -42,7 +43,7 @@ def check_output(field: Field, params: Any, y0: State, *, t: Time = 0.0) -> None
     """
     __tracebackhide__ = True
     prop = "output of the field"
-    for dtype in (jnp.float64, jnp.float32) if _double(y0) else (y0.dtype,):
+    for dtype in (jnp.float64, jnp.float32) if y0.dtype == jnp.float64 else (y0.dtype,):
         time, y, p = (cast(x, dtype) for x in (jnp.asarray(t, y0.dtype), y0, params))
         dy = _traced(prop, jax.eval_shape, field, time, y, p)
         _one_width(prop, field, time, y, p)
@@ -186,8 +187,8 @@ def check_batch(field: Field, params: Any, y0: State, *, key: Array, t: Time = 0
     time = jnp.asarray(t, y0.dtype)
     ys = [aside(y0, by) for by in jax.random.normal(key, (3, *y0.shape), y0.dtype)]
     ps = [scaled(params, scale) for scale in (1.0, 1.1, 0.9)]
-    axes = jax.tree.map(lambda x: 0 if _floats(x) else None, params)
-    stack = lambda *x: jnp.stack([jnp.asarray(part) for part in x]) if _floats(x[0]) else x[0]
+    axes = jax.tree.map(lambda x: 0 if is_float(x) else None, params)
+    stack = lambda *x: jnp.stack([jnp.asarray(part) for part in x]) if is_float(x[0]) else x[0]
     batch = jax.vmap(lambda y, p: field(time, y, p), in_axes=(0, axes))
     together = batch(jnp.stack(ys), jax.tree.map(stack, *ps))
     one = jax.jit(lambda y, p: field(time, y, p))
@@ -302,7 +303,7 @@ def check_gradients(
     __tracebackhide__ = True
     time, (near, key) = jnp.asarray(t, y0.dtype), jax.random.split(key)
     leaves, structure = jax.tree.flatten(params)
-    labels = {k: name for k, (name, x) in enumerate(named_leaves(params, "params")) if _floats(x)}
+    labels = {k: name for k, (name, x) in enumerate(named_leaves(params, "params")) if is_float(x)}
     if missing := set(unused) - set(labels.values()):
         raise ValueError(
             f"`unused` must name parameters, {', '.join(labels.values())}; got {sorted(missing)}."
@@ -348,35 +349,3 @@ def _finite(prop: str, leaves: list[tuple[str, Any]]) -> None:
                 hint="a root, norm, angle or division at zero? Replace its argument before it, by "
                 "`jnp.where`, or write it without.",
             )  # fmt: skip
-
-
-def aside(y: Any, by: Any) -> Any:
-    """Return states beside one, each entry moved by up to a half of itself.
-
-    No entry changes its sign, since a field may be defined for positive ones only; one at zero
-    moves up.
-    """
-    size = jnp.where(y == 0, jnp.max(jnp.abs(y), initial=0), y)
-    return y + 0.5 * jnp.where(y == 0, jnp.abs(jnp.tanh(by)), jnp.tanh(by)) * size
-
-
-def scaled(tree: Any, by: float) -> Any:
-    """Multiply floating leaves."""
-    return jax.tree.map(lambda x: x * by if _floats(x) else x, tree)
-
-
-def cast(tree: Any, dtype: Any) -> Any:
-    """Convert floating leaves."""
-    return jax.tree.map(lambda x: jnp.asarray(x, dtype) if _floats(x) else x, tree)
-
-
-def _floats(x: Any) -> bool:
-    return jnp.issubdtype(jnp.result_type(x), jnp.floating) if _numeric(x) else False
-
-
-def _numeric(x: Any) -> bool:
-    return isinstance(x, (float, int, np.ndarray, np.generic, jax.Array))
-
-
-def _double(y: Any) -> bool:
-    return jnp.asarray(y).dtype == jnp.float64

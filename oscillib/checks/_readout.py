@@ -13,6 +13,7 @@ from .._validate import check_count, check_floating
 from ._derivative import check_derivatives
 from ._failure import assert_close, fail
 from ._loss import generator
+from ._tree import cast
 
 
 def check_readout(
@@ -54,7 +55,7 @@ def check_readout(
     y, channels = jnp.asarray(y), check_count("channels", channels)
     # Without `jax_enable_x64` the second precision is the first.
     for dtype in dict.fromkeys([jnp.dtype(jnp.float32), jnp.zeros(()).dtype]):
-        _check_output(readout, _cast(y, dtype), _cast(params, dtype), channels, dtype)
+        _check_output(readout, cast(y, dtype), cast(params, dtype), channels, dtype)
     moved = 1 + 0.1 * generator(key).normal(size=(4, *y.shape))
     moved[0] = 1
     states = jnp.asarray(np.asarray(y) * moved, y.dtype)
@@ -78,7 +79,7 @@ def check_readout(
         "readout under jit and vmap equals a loop", together, alone, rtol=rtol, atol=atol, hint=hint
     )
     if jnp.zeros(()).dtype == jnp.float64:
-        point = (_cast(y, jnp.float64), _cast(params, jnp.float64))
+        point = (cast(y, jnp.float64), cast(params, jnp.float64))
         compiled = eqx.filter_jit(readout)
         check_derivatives(compiled, *point, key=key, names=("y", "params"))
 
@@ -86,10 +87,6 @@ def check_readout(
 @eqx.filter_jit
 def _together(readout: Any, states: Array, params: Any) -> Array:
     return jax.vmap(lambda y: readout(y, params))(states)
-
-
-def _cast(tree: Any, dtype: Any) -> Any:
-    return jax.tree.map(lambda x: x.astype(dtype) if eqx.is_inexact_array(x) else x, tree)
 
 
 def _check_output(readout: Any, y: Array, params: Any, channels: int, dtype: Any) -> None:

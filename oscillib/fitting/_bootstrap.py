@@ -14,10 +14,11 @@ from ._laplace import normal_quantile
 
 
 class Bootstrap(NamedTuple):
-    """What `bootstrap` found; trees are like `params`, with zeros for what is not fitted.
+    """What `bootstrap` found; trees are like `params`.
 
     Arguments:
-        corrected: parameters less their estimated bias.
+        corrected: parameters less their estimated bias; what is not fitted stays as it is, and is 0
+            in the trees below.
         bias: mean of the refits less `params`, in the parameters' units.
         standard_error: standard deviation of the refits, in the parameters' units.
         lower: lower ends of the intervals about `corrected`.
