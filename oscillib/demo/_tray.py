@@ -1,6 +1,6 @@
 """An invented tray of cultured tissue slices whose clock reporter glows, with known truth."""
 
-from typing import NamedTuple
+from typing import Literal, NamedTuple
 
 import jax
 import jax.numpy as jnp
@@ -18,6 +18,7 @@ _DAYS = 6
 _SETTLE = 200  # samples before the recording starts, so that it starts on the attractor
 _PERIOD = 24.0  # hours
 _GROWTH = 0.04  # per hour
+_DAMPED = -0.02  # per hour, where treatment damps
 _COUPLING = 0.06  # per hour, between the regions of an untreated slice
 _NOISE = 0.06  # per square root of an hour, for an amplitude near 1
 _FADING = 1 / 90.0  # per hour
@@ -43,24 +44,33 @@ class Tray(NamedTuple):
     treated: tuple[bool, ...]
 
 
-def tray(*, key: Array, slices: int = 2, regions: int = 3) -> Tray:
-    """Simulate a tray of tissue slices: untreated ones coupled within, treated ones uncoupled.
+def tray(
+    *,
+    key: Array,
+    slices: int = 2,
+    regions: int = 3,
+    effect: Literal["uncoupled", "damped"] = "uncoupled",
+) -> Tray:
+    """Simulate a tray of tissue slices, every second one treated, with known truth.
 
-    Every region is a self-sustained noisy Hopf unit with a period near 24 hours. Regions of an
-    untreated slice pull each other; treatment cuts the coupling and leaves the units as they are.
-    The glow fades slowly, readings are noisy, three hours are missing while the medium is changed,
-    and a hundredth of the readings is lost.
+    Every region of an untreated slice is a self-sustained noisy Hopf unit with a period near 24
+    hours, and pulls the other regions of its slice. Treatment either cuts the coupling and leaves
+    the units as they are, or damps the units, which then ring on noise alone, and leaves the
+    coupling. The glow fades slowly, readings are noisy, three hours are missing while the medium is
+    changed, and a hundredth of the readings is lost.
 
     Arguments:
         key: random key; the same key gives the same tray.
         slices: number of slices, every second one treated; default 2.
         regions: regions recorded in each slice; default 3.
+        effect: what treatment does: `"uncoupled"` (default) or `"damped"`. Both trays of a key have
+            the same periods, gains and draws of noise.
 
     Returns:
         The recording and the truth behind it.
 
     Raises:
-        ValueError: a count is below 1.
+        ValueError: a count is below 1; `effect` is neither.
         TypeError: a count is not an int.
 
     Example:
@@ -74,9 +84,11 @@ def tray(*, key: Array, slices: int = 2, regions: int = 3) -> Tray:
     """
     check_count("slices", slices)
     check_count("regions", regions)
+    if effect not in ("uncoupled", "damped"):
+        raise ValueError(f"`effect` must be 'uncoupled' or 'damped'; got {effect!r}.")
     spread_key, start_key, path_key, reading_key, missed_key = jax.random.split(key, 5)
     treated = jnp.arange(slices).repeat(regions) % 2 == 1
-    params = _dynamics(spread_key, treated, regions)
+    params = _dynamics(spread_key, treated, regions, effect)
     n = slices * regions
     gain = 250 + 100 * jax.random.uniform(jax.random.fold_in(spread_key, 1), (n,))
     readout = ReadoutParams(gain, offset=3 * gain)
@@ -110,12 +122,16 @@ def tray(*, key: Array, slices: int = 2, regions: int = 3) -> Tray:
     )
 
 
-def _dynamics(key: Array, treated: Array, regions: int) -> NoisyParams:
+def _dynamics(key: Array, treated: Array, regions: int, effect: str) -> NoisyParams:
     n = treated.shape[0]
     period = _PERIOD + 1.5 * jax.random.uniform(key, (n,), minval=-1.0)
     of_slice = jnp.arange(n) // regions
-    within = (of_slice[:, None] == of_slice[None, :]) & ~treated[:, None]
+    within = of_slice[:, None] == of_slice[None, :]
+    growth = saturation = jnp.full(n, _GROWTH)
+    if effect == "uncoupled":
+        within = within & ~treated[:, None]
+    else:
+        growth = jnp.where(treated, jnp.full_like(growth, _DAMPED), growth)
     coupling = jnp.where(within & ~jnp.eye(n, dtype=bool), _COUPLING / regions, 0.0)
-    growth = jnp.full(n, _GROWTH)
-    field = HopfParams(growth, 2 * jnp.pi / period, saturation=growth, coupling=coupling)
+    field = HopfParams(growth, 2 * jnp.pi / period, saturation=saturation, coupling=coupling)
     return NoisyParams(field, noise=jnp.full(n, _NOISE))
