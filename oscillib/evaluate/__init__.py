@@ -12,7 +12,14 @@ from ._comparison import (
     diebold_mariano as diebold_mariano,
     skill as skill,
 )
+from ._modes import (
+    AutoregressionModes as AutoregressionModes,
+    autoregression_modes as autoregression_modes,
+    autoregression_spectrum as autoregression_spectrum,
+)
+from ._order import OrderCriteria as OrderCriteria, order_criteria as order_criteria
 from ._origins import rolling_origins as rolling_origins, targets as targets
+from ._rayleigh import RayleighTest as RayleighTest, rayleigh_test as rayleigh_test
 from ._scores import (
     average_by_horizon as average_by_horizon,
     coverage as coverage,
@@ -24,4 +31,8 @@ from ._selection import (
     AutoregressionChoice as AutoregressionChoice,
     choose_autoregression as choose_autoregression,
 )
-from ._surrogate import phase_surrogate as phase_surrogate
+from ._surrogate import (
+    amplitude_adjusted_surrogate as amplitude_adjusted_surrogate,
+    phase_surrogate as phase_surrogate,
+)
+from ._whiteness import Portmanteau as Portmanteau, portmanteau as portmanteau
