@@ -99,16 +99,18 @@ def check_origins(origins: Any, last: int, why: str) -> Array:
     return jnp.asarray(origins, dtype=int)
 
 
-def check_samples(values: Any, mask: Any, *, recordings: bool = False) -> tuple[Array, Array]:
+def check_samples(
+    values: Any, mask: Any, *, recordings: bool = False, name: str = "values"
+) -> tuple[Array, Array]:
     """Return the observed samples with zeros in place of the rest, and the mask.
 
     Whatever stands where nothing was observed is gone before any arithmetic, so that it reaches
     neither a value nor a gradient.
     """
     if not (recordings and jnp.ndim(values) == 3):
-        check_shape("values", values, (None, None), "(time, channel)")
-    check_floating("values", values)
-    check_mask(mask, values, "values")
+        check_shape(name, values, (None, None), "(time, channel)")
+    check_floating(name, values)
+    check_mask(mask, values, name)
     values, mask = jnp.asarray(values), jnp.asarray(mask)
     return jnp.where(mask, values, jnp.zeros_like(values)), mask
 

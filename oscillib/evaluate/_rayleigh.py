@@ -2,6 +2,7 @@
 
 from typing import NamedTuple
 
+import jax
 import jax.numpy as jnp
 from jaxtyping import Array, Bool, Float
 
@@ -42,7 +43,7 @@ def rayleigh_test(
 
     Returns:
         `RayleighTest(resultant, statistic, p_value, defined)`. The p-value is an approximation for
-        `n` of about 10 or more: there it is off by less than 0.002. Undefined without a phase, or
+        `n` of about 10 or more: it is then off by less than 0.003. Undefined without a phase, or
         where one that was observed is not finite.
 
     Raises:
@@ -64,6 +65,11 @@ def rayleigh_test(
     check_floating("phases", phases)
     mask = jnp.ones(phases.shape, dtype=bool) if mask is None else mask
     check_mask(mask, phases, "phases")
+    return _test(phases, mask)
+
+
+@jax.jit
+def _test(phases: Array, mask: Array) -> RayleighTest:
     phases = jnp.where(mask, phases, 0)
     count = jnp.sum(mask)
     # The cosine of an infinity is NaN, so a bad phase leaves the sum not finite.

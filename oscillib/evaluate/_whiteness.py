@@ -1,5 +1,6 @@
 """Are residuals white? The portmanteau test of their autocorrelations."""
 
+from functools import partial
 from typing import NamedTuple
 
 import jax
@@ -67,7 +68,7 @@ def portmanteau(
         Ljung and Box 1978, Biometrika 65:297 (from memory); with missing samples, `n_k` in place of
         `n - k`: common practice, no source.
     """
-    residuals, mask = check_samples(residuals, mask)
+    residuals, mask = check_samples(residuals, mask, name="residuals")
     fitted = check_count("fitted", fitted, least=0)
     lags = check_count("lags", lags)
     num = residuals.shape[0]
@@ -75,15 +76,25 @@ def portmanteau(
         raise ValueError(
             f"`lags` must be above `fitted` = {fitted} and below the {num} samples; got {lags}."
         )
-    dtype = residuals.dtype
+    return _test(residuals, mask, lags, fitted)
+
+
+@partial(jax.jit, static_argnums=(2, 3))
+def _test(residuals: Array, mask: Array, lags: int, fitted: int) -> Portmanteau:
+    num, dtype = residuals.shape[0], residuals.dtype
     n = jnp.sum(mask, axis=0).astype(dtype)
     mean = jnp.sum(residuals, axis=0) / jnp.maximum(n, 1)
     x = jnp.where(mask, residuals - mean[None], 0)
     # What only rounds about its mean does not vary.
     least = num * (8 * jnp.finfo(dtype).eps * jnp.max(jnp.abs(residuals), axis=0)) ** 2
     square = jnp.sum(x**2, axis=0)
-    products = jnp.stack([jnp.sum(x[k:] * x[:-k], axis=0) for k in range(1, lags + 1)])
-    pairs = jnp.stack([jnp.sum(mask[k:] & mask[:-k], axis=0) for k in range(1, lags + 1)])
+
+    def at_lag(k):
+        inside = (jnp.arange(num) >= k)[:, None]
+        pairs = jnp.sum(inside & mask & jnp.roll(mask, k, axis=0), axis=0)
+        return jnp.sum(jnp.where(inside, x * jnp.roll(x, k, axis=0), 0), axis=0), pairs
+
+    products, pairs = jax.lax.map(at_lag, jnp.arange(1, lags + 1))
     # False for NaN too.
     defined = jnp.all(pairs > 0, axis=0) & (square > least) & jnp.isfinite(square)
     correlations = products / jnp.where(defined, square, 1)[None]
