@@ -107,12 +107,18 @@ def own_units(values: Any, mask: Any) -> tuple[Any, Any]:
 def simulated(prior: encoders.Prior, times: Any, mask: Any, key: Any) -> losses.Simulated:
     """Draw a slice, record it with the gaps of `mask`, and bring it to its own units."""
     pair = losses.simulate_pair(prior, simulate, times, mask, key=key)
-    # A simulation that blew up has nothing observed; its recording is left as it is.
+    # A simulation that blew up has nothing observed; it is left as it is.
     values, spread = own_units(pair.values, jnp.asarray(mask))
-    values = jnp.where(pair.mask, values, 0)
-    gain = jnp.where(pair.finite, pair.params.gain / spread, pair.params.gain)
+    gain = pair.params.gain / jnp.where(pair.finite, spread, 1)
     params = eqx.tree_at(lambda p: p.gain, pair.params, gain)
+    values = jnp.where(pair.mask, values, 0)
     return pair._replace(free=prior.free(params), params=params, values=values)
+
+
+def record(prior: encoders.Prior, params: Slice, times: Any, mask: Any, key: Any) -> Any:
+    """Record a known slice; return its free vector and the values, both in their own units."""
+    values, spread = own_units(simulate(params, times, key), mask)
+    return prior.free(eqx.tree_at(lambda p: p.gain, params, params.gain / spread)), values
 
 
 def encoder(prior: encoders.Prior, regions: int, *, key: Any) -> encoders.Encoder:

@@ -79,6 +79,7 @@ def plot_attention(
         below.set_ylabel("weight", fontsize=8)
         for panel in (above, below):
             panel.spines[["top", "right"]].set_visible(False)
-    panels[1].legend(loc="upper right", ncols=4, fontsize=8, frameon=False)
+    handles, labels = panels[1].get_legend_handles_labels()
+    figure.legend(handles, labels, loc="outside upper right", ncols=4, fontsize=8, frameon=False)
     panels[-1].set_xlabel("time")
     figure.savefig(path, dpi=120)
