@@ -108,6 +108,11 @@ def autoregression_spectrum(
     check_shape("frequencies", frequencies, (None,), "(frequency,)")
     check_floating("frequencies", frequencies)
     check_same_dtype("frequencies", frequencies, "model.coefficients", model.coefficients)
+    return _power(model, frequencies)
+
+
+@jax.jit
+def _power(model: Autoregression, frequencies: Array) -> Array:
     order, channels, _ = model.coefficients.shape
     lags = jnp.arange(1, order + 1).astype(frequencies.dtype)
     angle = 2 * jnp.pi * frequencies[:, None] * lags[None, :]

@@ -1,5 +1,3 @@
-from pathlib import Path
-
 import jax
 import jax.numpy as jnp
 import numpy as np
@@ -29,23 +27,6 @@ def simulate(num, seed):
 VALUES = simulate(60, 1)
 FULL = jnp.ones(VALUES.shape, dtype=bool)
 GAPS = FULL.at[10:13, 0].set(False).at[30, 1].set(False).at[57, 0].set(False)
-
-
-@pytest.fixture(scope="module")
-def germany():
-    """Log differences of West German investment, income, consumption, 1960Q2-1978Q4."""
-    import pandas as pd
-    import statsmodels
-
-    path = Path(statsmodels.__file__).parent / "tsa/tests/results/lutkepohl2.dta"
-    levels = pd.DataFrame(pd.read_stata(path))[["inv", "inc", "consump"]].to_numpy(dtype=float)
-    values = jnp.diff(jnp.log(jnp.asarray(levels[:76])), axis=0)
-    return values, jnp.ones(values.shape, dtype=bool)
-
-
-@pytest.fixture(scope="module")
-def german_model(germany):
-    return fit_autoregression(*germany, order=2, ridge=0.0)
 
 
 def test_german_economy(germany, german_model):
