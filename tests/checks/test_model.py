@@ -81,6 +81,18 @@ def test_ranks_of_an_exact_posterior():
     check_calibration(ranks=np.sum(draws < mean[:, None], axis=1), draws=19)
 
 
+def test_moments_of_the_ranks_of_an_exact_posterior():
+    # Uniform on 0..19: mean 19 / 2, variance 19 * 21 / 12; Talts et al. 2018 (arXiv 1804.06788;
+    # from memory). Stated tolerance 0.25: nearly four standard errors of the variance.
+    rng = np.random.default_rng(3)
+    mean = rng.normal(size=200_000)
+    reading = mean + rng.normal(size=200_000)
+    draws = reading[:, None] / 2 + rng.normal(size=(200_000, 19)) / np.sqrt(2)
+    ranks = np.sum(draws < mean[:, None], axis=1)
+    assert abs(ranks.mean() - 9.5) < 0.25 and abs(ranks.var() - 33.25) < 0.25
+    check_calibration(ranks=ranks, draws=19)
+
+
 def test_alarms_are_as_rare_as_stated():
     # 600 checks of right models at an alarm of 0.01 each; binomial(600, 0.01) is above 17 in less
     # than 1e-4 of cases, and 0 in 0.002 of them. Coverage is discrete, so its rate is lower.

@@ -61,6 +61,19 @@ def test_divergence_is_the_published_formula(measures):
     np.testing.assert_allclose(terms.sum(), exact, rtol=1e-12)
 
 
+def test_divergence_of_a_published_pair():
+    # Means (0, 0), (0.5, -0.2), covariances [[1, .3], [.3, 2]], [[1.5, -.2], [-.2, 1]]; closed
+    # form, and a Gauss-Hermite expectation.
+    law, prior = (
+        FreeGaussian(jnp.array(mean), jnp.linalg.cholesky(jnp.array(covariance)))
+        for mean, covariance in (
+            ([0.0, 0.0], [[1.0, 0.3], [0.3, 2.0]]),
+            ([0.5, -0.2], [[1.5, -0.2], [-0.2, 1.0]]),
+        )
+    )
+    assert abs(jnp.sum(law.divergence(prior)) - 0.369091254365) < 1e-12
+
+
 def test_divergence_is_the_mean_log_ratio(measures):
     @jax.jit
     @jax.vmap

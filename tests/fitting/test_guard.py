@@ -104,6 +104,17 @@ def test_good_steps_are_left_alone_bit_for_bit():
     assert state.bad_steps == state.rollbacks == 0
 
 
+def test_two_guarded_steps_of_adam_have_the_published_values():
+    # Rate 0.1, decays 0.9 and 0.999, 1e-8: Kingma & Ba 2015 (from memory).
+    optimiser = guarded(optax.adam(0.1))
+    expected = [-0.0999999966667, 0.09999999975], [-0.0144520524047, 0.0469468169597]
+    params = jnp.zeros(2)
+    step, state = jax.jit(optimiser.update), optimiser.init(params)
+    for gradient, update in zip(([0.3, -4.0], [-0.2, 1.0]), expected, strict=True):
+        got, state = step(jnp.array(gradient), state, params)
+        np.testing.assert_allclose(got, update, rtol=0, atol=1e-12)
+
+
 def test_bad_steps_are_skipped_and_counted():
     gradients = slopes(9)
     kinds = jnp.array([jnp.nan, jnp.inf, -jnp.inf])

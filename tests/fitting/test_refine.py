@@ -82,6 +82,11 @@ def test_rosenbrock():
         assert out.params.dtype == out.loss.dtype == dtype
         # Minimum (1, 1): the definition.
         np.testing.assert_allclose(out.params, [1.0, 1.0], rtol=error)
+    # Gradient and Hessian at (-1.2, 1): Rosenbrock 1960; closed form.
+    step = lambda p: refine_step(rosenbrock, refine_init(rosenbrock, p, Free()), Free())
+    first = jax.jit(step)(jnp.array([-1.2, 1.0]))
+    np.testing.assert_allclose(first.gradient, [-215.6, -88.0], rtol=0, atol=1e-9)
+    np.testing.assert_allclose(first.curvature, [[1330, 480], [480, 200]], rtol=0, atol=1e-9)
 
 
 def test_convergence_is_quadratic(samples):
