@@ -13,12 +13,14 @@ import json
 from pathlib import Path
 from typing import Any, NamedTuple
 
+import equinox as eqx
 import jax
 import jax.numpy as jnp
 import numpy as np
 import optax
 import scipy.stats
 import slice_model as model
+from group_comparison import LEVEL, change, compare, group_mean, interval, words
 from tqdm import tqdm
 
 from oscillib import cohort, encoders, fitting, losses, recordings
@@ -31,7 +33,6 @@ ROUND = 50  # training steps from checkpoint to checkpoint
 BATCH, DRAWS = 8, 8  # recordings in a step, and simulated slices with the gaps of each
 REFITS = 4  # of simulated recordings, for every slice
 NORMAL_90 = 1.6448536
-LEVEL = 0.95  # of each of the two differences: both hold together with at least 90 percent
 ASKED = ("coupling", "growth")
 LAGS = 12  # samples over which residuals must be white
 GROUPS = ("untreated", "treated")
@@ -140,14 +141,17 @@ def true_slices(made: Tray, spread: np.ndarray) -> model.Slice:
     field, rows = made.params.field, (-1, REGIONS)
     of_region = lambda x: np.asarray(x).reshape(rows)
     first = np.arange(0, field.growth.shape[0], REGIONS)
-    return model.Slice(
+    truth = model.Slice(
         growth=of_region(field.growth)[:, 0],
         coupling=np.asarray(field.coupling)[first, first + 1],
         noise=of_region(made.params.noise)[:, 0],
         reading=of_region(made.reading_noise / made.readout.gain)[:, 0],
         frequency=of_region(field.frequency),
-        gain=of_region(made.readout.gain) / spread,
+        level=np.ones_like(spread),
     )
+    expected = jax.vmap(lambda p: p.gain)(jax.tree.map(jnp.asarray, truth))
+    level = of_region(made.readout.gain) / spread / np.asarray(expected)
+    return eqx.tree_at(lambda p: p.level, truth, level)
 
 
 # Propose ------------------------------------------------------------------------------------------
@@ -317,24 +321,17 @@ def certify(data: Slices, prior: encoders.Prior, proposals: Any, refined: Refine
     error = np.sqrt(np.diagonal(refined.covariance, axis1=1, axis2=2))
     names = fitting.parameter_names(prior.template, model.RULES)
     good = converged(refined)
-    inside = lambda middle, width: np.abs(middle - truth)[good] < NORMAL_90 * width[good]
-    rms = lambda middle: dict(
-        zip(names, np.sqrt(np.mean((middle - truth)[good] ** 2, axis=0)).tolist(), strict=True)
-    )
+    mean = lambda x: np.mean(x[good], axis=0) if good.any() else np.full(x.shape[1], np.nan)
+    inside = lambda middle, width: mean(np.abs(middle - truth) < NORMAL_90 * width)
+    each = lambda numbers: {n: number(x) for n, x in zip(names, numbers, strict=True)}
+    covered = {"proposal": inside(laws.mean, spread), "refined": inside(refined.free, error)}
+    off = {"proposal": laws.mean - truth, "refined": refined.free - truth}
+    white = whiteness(data, refined)
     return {
         "not_converged": [n for n, ok in zip(data.names, good, strict=True) if not ok],
-        "not_white": [
-            n for n, p in zip(data.names, whiteness(data, refined), strict=True) if p < 0.01
-        ],
-        "coverage_90": {
-            "proposal": number(np.mean(inside(laws.mean, spread))),
-            "refined": number(np.mean(inside(refined.free, error))),
-            **{
-                n: number(c)
-                for n, c in zip(names, np.mean(inside(refined.free, error), axis=0), strict=True)
-            },
-        },
-        "rms_error": {"proposal": rms(laws.mean), "refined": rms(refined.free)},
+        "not_white": [n for n, p in zip(data.names, white, strict=True) if not p >= 0.01],
+        "coverage_90": {k: {"all": number(np.mean(v)), **each(v)} for k, v in covered.items()},
+        "rms_error": {k: each(np.sqrt(mean(v**2))) for k, v in off.items()},
     }
 
 
@@ -343,100 +340,28 @@ def certify(data: Slices, prior: encoders.Prior, proposals: Any, refined: Refine
 
 def answer(data: Slices, prior: encoders.Prior, refined: Refined) -> dict:
     """Say what treatment changed: differences of group means, with intervals."""
-    good = converged(refined)
     names = fitting.parameter_names(prior.template, model.RULES)
-    out = {}
+    means, out = {}, {}
     for name in ASKED:
         i = names.index(name)
         value = refined.free[:, i] - refined.bias[:, i]
         variance = refined.covariance[:, i, i] * (1 + 1 / REFITS)
-        usable = good & np.isfinite(value)
-        means = {
-            group: group_mean(value[usable & here], variance[usable & here])
-            for group, here in zip(GROUPS, (~data.treated, data.treated), strict=True)
+        usable = converged(refined) & np.isfinite(value)
+        for group, here in zip(GROUPS, (~data.treated, data.treated), strict=True):
+            means[name, group] = group_mean(value[usable & here], variance[usable & here])
+    changes = {name: compare(means[name, "treated"], means[name, "untreated"]) for name in ASKED}
+    for name in ASKED:
+        groups = {group: means[name, group] for group in GROUPS}
+        out[name] = {
+            "change": change(changes[name]),
+            "difference": triple(*changes[name]),
+            **{
+                group: {**triple(*interval(m)), "slices": m.count, "spread": number(m.spread)}
+                for group, m in groups.items()
+            },
         }
-        difference = triple(*compare(means["treated"], means["untreated"]))
-        groups = {
-            group: {"slices": mean.count, **triple(*interval(mean)), "spread": number(mean.spread)}
-            for group, mean in means.items()
-        }
-        out[name] = {"difference": difference, "change": change(difference), **groups}
-    return {"level": LEVEL, **out, "words": words(out)}
-
-
-class Mean(NamedTuple):
-    """Mean of a group."""
-
-    value: float
-    error: float
-    count: int
-    spread: float  # standard deviation from slice to slice beyond the slices' own errors
-
-
-def group_mean(value: np.ndarray, variance: np.ndarray) -> Mean:
-    """Average slices that differ among themselves and are each uncertain (random effects).
-
-    Source: DerSimonian and Laird 1986; the error of the mean from the spread actually seen, Hartung
-    and Knapp 2001, here never below what the slices' own errors give (both from memory).
-    """
-    n = len(value)
-    if n < 2:
-        return Mean(np.nan, np.nan, n, np.nan)
-    weight = 1 / variance
-    middle = np.sum(weight * value) / np.sum(weight)
-    beyond = np.sum(weight * (value - middle) ** 2) - (n - 1)
-    between = max(0.0, beyond / (np.sum(weight) - np.sum(weight**2) / np.sum(weight)))
-    weight = 1 / (variance + between)
-    middle = np.sum(weight * value) / np.sum(weight)
-    seen = np.sum(weight * (value - middle) ** 2) / (n - 1)
-    return Mean(middle, np.sqrt(max(1.0, seen) / np.sum(weight)), n, np.sqrt(between))
-
-
-def interval(mean: Mean) -> tuple[float, float, float]:
-    half = scipy.stats.t.ppf((1 + LEVEL) / 2, max(mean.count - 1, 1)) * mean.error
-    return mean.value, mean.value - half, mean.value + half
-
-
-def compare(one: Mean, other: Mean) -> tuple[Any, Any, Any]:
-    """Return the difference of two means and its interval, their errors unequal (Welch 1947)."""
-    parts = np.array([one.error, other.error]) ** 2
-    degrees = np.sum(parts) ** 2 / np.sum(parts**2 / (np.array([one.count, other.count]) - 1))
-    half = scipy.stats.t.ppf((1 + LEVEL) / 2, degrees) * np.sqrt(np.sum(parts))
-    value = one.value - other.value
-    return value, value - half, value + half
-
-
-def change(difference: dict) -> str:
-    if difference["lower"] is None:
-        return "unknown"
-    if difference["upper"] < 0:
-        return "lowered"
-    return "raised" if difference["lower"] > 0 else "none seen"
-
-
-def words(found: dict) -> str:
-    """Answer in a sentence, by the intervals alone."""
-
-    def told(name):
-        d = found[name]["difference"]
-        if d["lower"] is None:
-            return f"{name} by an unknown amount"
-        ends = f"[{d['lower']:+.3f}, {d['upper']:+.3f}]"
-        return f"{name} by {d['value']:+.3f} per hour ({100 * LEVEL:.0f} % interval {ends})"
-
-    coupling, growth = (found[name]["change"] for name in ASKED)
-    changes = f"Treatment changed {told('coupling')} and {told('growth')}: "
-    if "unknown" in (coupling, growth):
-        return changes + "too few slices converged for an answer."
-    parts = {
-        "lowered": ("it uncoupled the regions", "it damped the cells"),
-        "raised": ("it coupled the regions more strongly", "it made the cells' rhythm stronger"),
-        "none seen": ("uncoupling is not seen", "damping is not seen"),
-    }
-    first, second = parts[coupling][0], parts[growth][1]
-    if coupling == "none seen" and growth != "none seen":
-        first, second = second, first
-    return f"{changes}{first}; {second}."
+    text = words(changes["coupling"], changes["growth"], interval(means["growth", "treated"]))
+    return {"level": LEVEL, **out, "words": text}
 
 
 # Report -------------------------------------------------------------------------------------------
@@ -460,9 +385,6 @@ def describe_slices(data: Slices, prior: encoders.Prior, refined: Refined) -> li
     def entry(i):
         value, low, high = (jax.tree.map(lambda x: x[i], tree) for tree in fitted)
         one = lambda get: triple(get(value), get(low), get(high))
-        many = lambda get: [
-            triple(*ends) for ends in zip(get(value), get(low), get(high), strict=True)
-        ]
         turn = lambda p: 2 * np.pi / p.frequency
         periods = [triple(*e) for e in zip(turn(value), turn(high), turn(low), strict=True)]
         return {
@@ -475,43 +397,41 @@ def describe_slices(data: Slices, prior: encoders.Prior, refined: Refined) -> li
             **{k: one(lambda p, k=k: getattr(p, k)) for k in ("growth", "coupling", "noise")},
             "reading_noise": one(lambda p: p.reading),
             "period": periods,
-            "gain": many(lambda p: p.gain * np.asarray(data.scalings[i].spread)),
+            "gain": (value.gain * np.asarray(data.scalings[i].spread)).tolist(),
         }
 
     return [entry(i) for i in range(len(data.names))]
 
 
 def table(report: dict) -> str:
-    show = lambda t: (
-        f"{t['value']:+.3f} (no interval)"
-        if t["lower"] is None
-        else f"{t['value']:+.3f} [{t['lower']:+.3f}, {t['upper']:+.3f}]"
-    )
+    show = lambda t: f"{t['value']:+.3f} [{t['lower']:+.3f}, {t['upper']:+.3f}]"
+    sure, count = report["certificate"], len(report["slices"])
     lines = ["", f"{'slice':<11}{'group':<12}{'growth per hour':<26}{'coupling per hour':<26}fit"]
     for s in report["slices"]:
-        flag = s["status"].split(":")[0] + (
-            "" if s["white"] is None or s["white"] > 0.01 else ", residuals not white"
+        numbers = "".join(
+            f"{'unknown' if None in s[k].values() else show(s[k]):<26}"
+            for k in ("growth", "coupling")
         )
-        lines.append(
-            f"{s['slice']:<11}{s['group']:<12}{show(s['growth']):<26}{show(s['coupling']):<26}{flag}"
-        )
-    sure = report["certificate"]
-    covered, off = sure["coverage_90"], sure["rms_error"]
+        marks = [s["status"].split(":")[0]]
+        marks += ["residuals not white"] * (s["slice"] in sure["not_white"])
+        lines.append(f"{s['slice']:<11}{s['group']:<12}{numbers}{', '.join(marks)}")
     lines += [
         "",
-        f"of {len(report['slices'])} slices {len(sure['not_converged'])} did not converge, and "
+        f"of {count} slices {len(sure['not_converged'])} did not converge, and "
         f"{len(sure['not_white'])} left residuals that are not white",
-        f"truth inside the 90 % intervals: {covered['refined']:.0%} "
-        f"(of the proposals: {covered['proposal']:.0%})",
-        *(
-            f"rms error of {name}: {off['proposal'][name]:.4f} proposed, "
-            f"{off['refined'][name]:.4f} refined"
-            for name in ASKED
-        ),
-        "",
-        report["answer"]["words"],
     ]
-    return "\n".join(lines)
+    if len(sure["not_converged"]) < count:
+        inside, off = sure["coverage_90"], sure["rms_error"]
+        lines += [
+            f"truth inside the 90 % intervals: {inside['proposal']['all']:.0%} as proposed, "
+            f"{inside['refined']['all']:.0%} refined",
+            *(
+                f"rms error of {k}: {off['proposal'][k]:.4f} as proposed, "
+                f"{off['refined'][k]:.4f} refined, per hour"
+                for k in ASKED
+            ),
+        ]
+    return "\n".join([*lines, "", report["answer"]["words"]])
 
 
 def draw(out: Path, data: Slices, proposals: encoders.Proposal, report: dict) -> None:

@@ -1,7 +1,9 @@
 """The model of one tissue slice: what is believed of it, how it is simulated and filtered.
 
 A slice is a few noisy Hopf units that share growth, noise and one coupling strength; each region
-has its own frequency and its own gain. Nothing here knows which slices were treated.
+has its own frequency and its own gain. Channels are in units of their own spread, which all but
+fixes the gain once the dynamics are known: what is fitted is the level, the gain over the one that
+is expected then. Nothing here knows which slices were treated.
 """
 
 from typing import Any
@@ -10,6 +12,7 @@ import equinox as eqx
 import jax
 import jax.numpy as jnp
 import numpy as np
+from jax.scipy.stats import norm
 
 from oscillib import encoders, likelihood, losses
 from oscillib.fields import HopfNetwork, HopfParams
@@ -34,7 +37,20 @@ class Slice(eqx.Module):
     noise: Any  # (): per square root of an hour
     reading: Any  # (): standard deviation of a reading, in units of the state
     frequency: Any  # (region,): rad per hour
-    gain: Any  # (region,)
+    level: Any  # (region,): of the order of 1
+
+    @property
+    def gain(self) -> Any:
+        """Return the gains, shape `(region,)`: `level` over the expected spread of a channel.
+
+        Of an uncoupled unit r^2 follows a normal law of mean a/b and variance s^2/b cut at 0.
+
+        Source: Fokker-Planck equation, e.g. Risken 1989 (from memory).
+        """
+        middle, spread = self.growth / SATURATION, self.noise / SATURATION**0.5
+        ratio = middle / spread
+        cut = jnp.exp(norm.logpdf(ratio) - norm.logcdf(ratio))
+        return self.level / jnp.sqrt((middle + spread * cut) / 2 + self.reading**2)
 
     @property
     def dynamics(self) -> NoisyParams:
@@ -68,10 +84,15 @@ def beliefs(regions: int, dtype: Any = float) -> encoders.Prior:
     ones = jnp.ones(regions, dtype)
     number = lambda x: jnp.asarray(x, dtype)
     middle = Slice(
-        number(0.0), number(0.0), number(0.07), number(0.1), 2 * jnp.pi / 24 * ones, 2.0 * ones
+        number(0.0), number(0.0), number(0.07), number(0.1), 2 * jnp.pi / 24 * ones, 0.83 * ones
     )
     # Growth and coupling per hour, about none at all; the others are relative.
-    return encoders.Prior(middle, RULES, sd=Slice(0.05, 0.03, 0.4, 0.4, 0.06, 0.7))
+    prior = encoders.Prior(middle, RULES, sd=Slice(0.05, 0.03, 0.4, 0.4, 0.06, 0.12))
+    # Levels are off together, by what coupling does to the spread, and each by the chance of six
+    # days; how far was seen in simulations.
+    covariance = prior.law.covariance.at[-regions:, -regions:].add(0.45**2)
+    law = encoders.FreeGaussian(prior.law.mean, jnp.linalg.cholesky(covariance))
+    return eqx.tree_at(lambda p: p.law, prior, law)
 
 
 def simulate(params: Slice, times: Any, key: Any) -> Any:
@@ -109,8 +130,8 @@ def simulated(prior: encoders.Prior, times: Any, mask: Any, key: Any) -> losses.
     pair = losses.simulate_pair(prior, simulate, times, mask, key=key)
     # A simulation that blew up has nothing observed; it is left as it is.
     values, spread = own_units(pair.values, jnp.asarray(mask))
-    gain = pair.params.gain / jnp.where(pair.finite, spread, 1)
-    params = eqx.tree_at(lambda p: p.gain, pair.params, gain)
+    level = pair.params.level / jnp.where(pair.finite, spread, 1)
+    params = eqx.tree_at(lambda p: p.level, pair.params, level)
     values = jnp.where(pair.mask, values, 0)
     return pair._replace(free=prior.free(params), params=params, values=values)
 
@@ -118,7 +139,7 @@ def simulated(prior: encoders.Prior, times: Any, mask: Any, key: Any) -> losses.
 def record(prior: encoders.Prior, params: Slice, times: Any, mask: Any, key: Any) -> Any:
     """Record a known slice; return its free vector and the values, both in their own units."""
     values, spread = own_units(simulate(params, times, key), mask)
-    return prior.free(eqx.tree_at(lambda p: p.gain, params, params.gain / spread)), values
+    return prior.free(eqx.tree_at(lambda p: p.level, params, params.level / spread)), values
 
 
 def encoder(prior: encoders.Prior, regions: int, *, key: Any) -> encoders.Encoder:
