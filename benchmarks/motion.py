@@ -233,7 +233,7 @@ def train(prior: encoders.Prior, steps: int, batch: int, *, key: Any) -> encoder
     """Train on fresh simulations, `batch` of them a step."""
     begin, run = jax.random.split(key)
     unit = unit_prior(prior)
-    net = encoder(unit, key=begin)
+    net: Any = encoder(unit, key=begin)
     rate = optax.cosine_decay_schedule(4e-3, steps)
     optimiser = optax.chain(optax.clip_by_global_norm(10.0), optax.adam(rate))
 
@@ -339,7 +339,7 @@ def autoregressions(values: np.ndarray, *, level: bool) -> list[np.ndarray]:
     for order in (1, 2, 4):
         for ridge in (0.01, 0.1):
             fit = partial(fit_autoregression, order=order, ridge=ridge)
-            model = jax.vmap(lambda v, fit=fit: fit(v, SEEN))(jnp.asarray(values))
+            model = jax.vmap(lambda v, fit=fit: fit(v, jnp.asarray(SEEN)))(jnp.asarray(values))
             parts = [np.asarray(model.coefficients).reshape(len(values), -1)]
             if level:
                 residual = np.diagonal(np.asarray(model.covariance), axis1=1, axis2=2)
