@@ -33,7 +33,6 @@ import argparse
 import importlib.util
 import json
 import time
-from functools import partial
 from pathlib import Path
 from typing import Any, NamedTuple
 
@@ -42,12 +41,10 @@ import jax
 import jax.numpy as jnp
 import numpy as np
 import optax
-import scipy.signal
-import scipy.stats
 from _discriminant import judge
+from _motion_features import autoregressions, parameter_features, spectral_features
 
 from oscillib import encoders, fitting, likelihood, losses, recordings
-from oscillib.evaluate import fit_autoregression
 from oscillib.fields import HopfNetwork, HopfParams
 from oscillib.integrate import NoisyParams, noisy_rollout, noisy_strang
 from oscillib.observe import ReadoutParams, linear_readout
@@ -270,8 +267,13 @@ def explained(net: encoders.Encoder, prior: encoders.Prior, count: int) -> dict[
     keys = jax.random.split(jax.random.key(99), count)
     values, _, free = jax.jit(jax.vmap(simulated, (None, 0)))(prior, keys)
     missed = jnp.mean((propose(net, prior, values) - free) ** 2, axis=0) / jnp.var(free, axis=0)
-    parts = np.split(np.asarray(1 - missed), np.cumsum(list(GROUPS.values()))[:-1])
+    parts = by_group(1 - missed)
     return {name: float(part.mean()) for name, part in zip(GROUPS, parts, strict=True)}
+
+
+def by_group(free: Any) -> list[np.ndarray]:
+    """Cut a flat vector, or many, into the groups of parameters."""
+    return np.split(np.asarray(free, float), np.cumsum(list(GROUPS.values()))[:-1], axis=-1)
 
 
 def refine(prior: encoders.Prior, free: Any, scaled: Any, steps: int) -> Any:
@@ -302,68 +304,23 @@ def evidence(prior: encoders.Prior, free: Any, scaled: Any) -> np.ndarray:
     return np.asarray(run(free, jnp.asarray(scaled))) / (SAMPLES * CHANNELS)
 
 
-# Features -----------------------------------------------------------------------------------------
-
-
-def parameter_features(free: Any, offset: Any = None, spread: Any = None) -> list[np.ndarray]:
-    """Lay parameters out, gain as log amplitude, without coupling and with it."""
-    parts = np.split(np.asarray(free, float), np.cumsum(list(GROUPS.values()))[:-1], axis=1)
-    growth, _, coupling, log_noise, log_gain, _ = parts
-    # Root mean square of an uncoupled unit as its channel shows it, in place of the gain alone;
-    # r^2 follows a normal law cut at 0 (Fokker-Planck equation, e.g. Risken 1989, from memory).
-    noise = np.exp(log_noise)
-    ratio = growth / noise
-    cut = np.exp(scipy.stats.norm.logpdf(ratio) - scipy.stats.norm.logcdf(ratio))
-    parts[4] = log_gain + np.log((growth + noise * cut) / 2) / 2
-    del parts[2]
-    if offset is not None:  # back from the recording's own units to the sensor's
-        parts[3] = parts[3] + np.log(spread)
-        parts.append(offset)
-    return [np.hstack(parts), np.hstack([*parts, coupling])]
-
-
-def spectral_features(values: np.ndarray, *, zero: bool) -> list[np.ndarray]:
-    """Return the log power of each channel in 5, 10 or 25 bands up to 5 Hz, and at 0 Hz."""
-    power = scipy.signal.periodogram(values, 1 / INTERVAL, "hann", axis=1)[1][:, 1:]
-    first = [np.mean(values, axis=1) ** 2] if zero else []
-    out = []
-    for bands in (5, 10, 25):
-        average = power.reshape(len(values), bands, -1, CHANNELS).mean(2)
-        out.append(np.log(np.hstack([*first, average.reshape(len(values), -1)]) + 1e-9))
-    return out
-
-
-def autoregressions(values: np.ndarray, *, level: bool) -> list[np.ndarray]:
-    """Return the coefficients of each recording's autoregression; mean and residual too."""
-    out = []
-    for order in (1, 2, 4):
-        for ridge in (0.01, 0.1):
-            fit = partial(fit_autoregression, order=order, ridge=ridge)
-            model = jax.vmap(lambda v, fit=fit: fit(v, jnp.asarray(SEEN)))(jnp.asarray(values))
-            parts = [np.asarray(model.coefficients).reshape(len(values), -1)]
-            if level:
-                residual = np.diagonal(np.asarray(model.covariance), axis1=1, axis2=2)
-                parts += [np.asarray(model.mean), np.log(residual) / 2]
-            out.append(np.hstack(parts))
-    return out
-
-
 # Report -------------------------------------------------------------------------------------------
 
 
 def rows_of_tables(free: dict, cohort: Cohort) -> dict[str, dict]:
     """Return the features of every row of both tables."""
     scaled, offset, spread = own_units(cohort.values)
+    parts = {name: by_group(x) for name, x in free.items()}
     return {
         "recordings as they are": {
-            **{name: parameter_features(x, offset, spread) for name, x in free.items()},
+            **{name: parameter_features(x, offset, spread) for name, x in parts.items()},
             "log power in bands": spectral_features(cohort.values, zero=True),
             "autoregression": autoregressions(cohort.values, level=False),
             "autoregression, mean, residual": autoregressions(cohort.values, level=True),
             "mean and log spread alone": [np.hstack([offset, np.log(spread)])],
         },
         "recordings in their own units": {
-            **{name: parameter_features(x) for name, x in free.items()},
+            **{name: parameter_features(x) for name, x in parts.items()},
             "log power in bands": spectral_features(scaled, zero=False),
             "autoregression": autoregressions(scaled, level=False),
         },
