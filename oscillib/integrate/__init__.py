@@ -22,6 +22,7 @@ from ._noisy_step import (
 from ._rollout import rollout as rollout, segmented_scan as segmented_scan
 from ._runge_kutta import heun as heun, rk4 as rk4
 from ._splitting import strang as strang, suzuki as suzuki
+from ._state_noise import state_noise_terms as state_noise_terms
 from ._windows import (
     WindowRollout as WindowRollout,
     Windows as Windows,

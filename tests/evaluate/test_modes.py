@@ -69,7 +69,7 @@ def test_spectrum_integrates_to_the_variance():
     mean = jnp.mean(autoregression_spectrum(SUNSPOTS, grid), axis=0)
     np.testing.assert_allclose(mean, 4.7859431005, rtol=0, atol=1e-9)
     big = np.zeros((4, 4))
-    big[:2] = np.hstack(np.asarray(COUPLED.coefficients))
+    big[:2] = np.concatenate(np.asarray(COUPLED.coefficients), axis=1)
     big[2:, :2] = np.eye(2)
     shock = np.zeros((4, 4))
     shock[:2, :2] = COUPLED.covariance

@@ -1,3 +1,5 @@
+from typing import Any
+
 import jax
 import jax.numpy as jnp
 import numpy as np
@@ -25,7 +27,8 @@ def test_sunspots():
     from statsmodels.datasets import sunspots
     from statsmodels.stats.diagnostic import acorr_ljungbox
 
-    values = np.array(sunspots.load_pandas().data["SUNACTIVITY"], dtype=float)
+    table: Any = sunspots.load_pandas().data
+    values = np.array(table["SUNACTIVITY"], dtype=float)
     x = jnp.asarray(values)[:, None]
     out = portmanteau(x, jnp.ones(x.shape, dtype=bool), lags=5, fitted=2)
     assert abs(out.statistic[0] - 355.26381739) < 1e-8
