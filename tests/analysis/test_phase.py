@@ -1,3 +1,5 @@
+from typing import Any
+
 import jax
 import jax.numpy as jnp
 import numpy as np
@@ -7,6 +9,7 @@ import scipy.signal
 from oscillib.analysis import analytic_phase, hopf_phase, mean_frequency, planar_phase
 from oscillib.fields import HopfNetwork, HopfParams, HopfUnitParams
 from oscillib.integrate import rk4, rollout
+from oscillib.recordings import on_grid, recording
 
 
 # The Hopf unit of the check values: growth, saturation, shear, angular frequency.
@@ -32,6 +35,29 @@ def test_hilbert_equals_scipy(n):
     np.testing.assert_allclose(
         found.phase, np.unwrap(np.angle(expected), axis=0), rtol=0, atol=1e-12
     )
+
+
+def test_band_is_cut_out_by_scipy_before_the_phase_is_taken():
+    # The route of a user: a recording on a regular grid, scipy's Butterworth band-pass run forward
+    # and backward, then the phase. At the edges of the band |H|^2 = 1/2, forward and backward 1/4
+    # of the power; closed form.
+    low, high, step = 0.8, 1.25, 0.1
+    band = scipy.signal.butter(3, [low, high], "bandpass", fs=1 / step, output="sos")
+    edges: Any = [low, high]
+    gain = np.abs(np.asarray(scipy.signal.freqz_sos(band, edges, fs=1 / step)[1])) ** 2
+    np.testing.assert_allclose(gain, 0.5, rtol=0, atol=1e-9)
+    times = step * np.arange(2400)
+    # Both edges, each whole turns of the middle 1200 samples long, and a slow drift outside.
+    tones = np.stack([np.cos(2 * np.pi * f * times) for f in (low, high)], axis=1)
+    slow = 2 * np.sin(2 * np.pi * 0.05 * times)[:, None]
+    r = on_grid(recording(times, tones + slow))
+    assert bool(jnp.all(r.mask))  # a filter takes no gaps
+    filtered = scipy.signal.sosfiltfilt(band, np.asarray(r.values), axis=0)[600:1800]
+    np.testing.assert_allclose(np.mean(filtered**2, axis=0), 0.5 * 0.25, rtol=0, atol=1e-9)
+    found = analytic_phase(jnp.asarray(filtered))
+    np.testing.assert_allclose(found.amplitude, 0.5, rtol=0, atol=1e-9)
+    turned = (found.phase[-1] - found.phase[0]) / (2 * np.pi * step * 1199)
+    np.testing.assert_allclose(turned, [low, high], rtol=0, atol=1e-9)
 
 
 def test_planar_phase_counts_turns_and_directions():

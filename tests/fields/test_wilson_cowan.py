@@ -29,6 +29,22 @@ def test_period_and_peak(compiled):
     assert abs(np.max(out.sol(np.linspace(times[-2], times[-1], 4001))[0]) - 0.269659) < 1e-5
 
 
+def test_onset(compiled):
+    # Drive at which the steady state of the same set starts to oscillate as the drive falls, and
+    # its angular frequency: no trace, positive determinant. Found by a root search on the equations
+    # written out apart (no printed value).
+    drive, frequency, state = 1.8793131981, 2.6643132260, jnp.array([0.2493382531, 0.1982203366])
+    onset = WilsonCowanParams([drive])
+    np.testing.assert_allclose(compiled[0](state, onset), 0, atol=1e-9)
+    eigenvalues = np.linalg.eigvals(compiled[1](state, onset))
+    np.testing.assert_allclose(eigenvalues.real, 0, atol=1e-8)
+    np.testing.assert_allclose(np.abs(eigenvalues.imag), frequency, rtol=0, atol=1e-8)
+    for change, grows in ((-0.02, True), (0.02, False)):
+        params = WilsonCowanParams([drive + change])
+        at = root(lambda y, p=params: np.asarray(compiled[0](y, p)), state, tol=1e-12).x
+        assert (np.max(np.linalg.eigvals(compiled[1](at, params)).real) > 0) == grows
+
+
 # Parameters: Wilson & Cowan 1972, figure 4 (from memory); a root search found these.
 @pytest.mark.parametrize(
     "e, i, stable", [(0.0, 0.0, True), (0.18967, 0.06810, False), (0.43975, 0.22593, True)]
