@@ -25,6 +25,7 @@ explain. Recordings as they are: accuracy (mean and standard deviation over repe
 five-fold cross-validation), log loss in nats with its standard error over recordings, and both on
 the split in which the archive ships the data, where the features may use offset and scale.
 Recordings in their own units: the same where nobody may use them, so that only dynamics is left.
+Read log loss with its error: one sure mistake of the discriminant may make most of it.
 Nothing was looked at in the archive's test half while this file was written. The file does not say
 who wore the watch (four people, it says), so a fold may hold a wearer that the training part knows.
 """
