@@ -9,7 +9,7 @@ standard deviation of every channel are taken off, and come back as offset and s
 
 One pass: an encoder looks at the recording with one channel put first and proposes that channel's
 unit (growth, frequency, drives it receives, noise, gain, reading noise), so that all six channels
-share its weights. It takes ten rows a unit of time, each with a block of samples and of lagged
+share its weights. It reads twenty rows, each with half a second of samples and of their lagged
 products. It is trained once, without labels, on simulations from the prior: it has seen no
 recording of the cohort. Its means are the features; a second row refines them by three steps of
 Fisher scoring on the filter's likelihood times the prior, recording by recording.
@@ -26,8 +26,9 @@ five-fold cross-validation), log loss in nats with its standard error over recor
 the split in which the archive ships the data, where the features may use offset and scale.
 Recordings in their own units: the same where nobody may use them, so that only dynamics is left.
 Read log loss with its error: one sure mistake of the discriminant may make most of it.
-Nothing was looked at in the archive's test half while this file was written. The file does not say
-who wore the watch (four people, it says), so a fold may hold a wearer that the training part knows.
+The design was tried out on the archive's training half, which cross-validation tests on too; its
+test half was first looked at by the finished benchmark. The file does not say who wore the watch
+(four people, it says), so a fold may hold a wearer that the training part knows.
 """
 
 import argparse
