@@ -30,6 +30,7 @@ def test_orders_of_the_german_economy(germany):
         np.testing.assert_allclose(getattr(out, name), known.ics[theirs], rtol=1e-10)
 
 
+@pytest.mark.long
 def test_known_order_is_found():
     # An AR(2) of 2000 samples: BIC and HQ are consistent (Hannan & Quinn 1979, from memory).
     rng = np.random.default_rng(0)

@@ -68,6 +68,7 @@ def test_gradient_against_central_differences(run):
         np.testing.assert_allclose(slope[index], (up - down) / 2e-5, rtol=1e-5, atol=1e-9)
 
 
+@pytest.mark.long
 def test_rejects_white_noise_at_the_nominal_rate_with_and_without_gaps():
     noise = jnp.asarray(RNG.normal(size=(300, 2000)))
     for mask in (noise == noise, jnp.asarray(RNG.random(noise.shape) < 0.7)):

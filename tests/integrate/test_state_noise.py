@@ -75,6 +75,7 @@ def strong_order(of):
 
 
 # Kloeden & Platen 1992 (from memory); slopes 0.5209, 0.9851 and 0.9883 computed apart.
+@pytest.mark.long
 def test_euler_maruyama_is_of_strong_order_one_half():
     assert abs(strong_order(ends(diffrax.Euler())) - 0.5) < 0.12
 
@@ -83,6 +84,7 @@ def test_milstein_is_of_strong_order_1(milstein):
     assert abs(strong_order(milstein) - 1) < 0.12
 
 
+@pytest.mark.long
 def test_heun_is_of_strong_order_1_in_the_sense_of_stratonovich():
     # The same motion: Stratonovich's drift is less by s^2 X / 2.
     stratonovich = ends(diffrax.Heun(), lambda t, y, mu: (mu - S**2 / 2) * y)
@@ -117,6 +119,7 @@ def test_stochastic_landau_equation():
     assert abs(run(params.noise, path, 1000.0) - 0.32736661) < 2e-4
 
 
+@pytest.mark.long
 def test_gradient_by_the_strength_of_the_noise():
     @jax.jit
     @jax.value_and_grad
