@@ -332,6 +332,7 @@ def certify(data: Slices, prior: encoders.Prior, proposals: Any, refined: Refine
         "not_white": [n for n, p in zip(data.names, white, strict=True) if not p >= 0.01],
         "coverage_90": {k: {"all": number(np.mean(v)), **each(v)} for k, v in covered.items()},
         "rms_error": {k: each(np.sqrt(mean(v**2))) for k, v in off.items()},
+        "mean_error": {k: each(mean(v)) for k, v in [*off.items(), ("refits", refined.bias)]},
     }
 
 

@@ -40,17 +40,22 @@ class Slice(eqx.Module):
     level: Any  # (region,): of the order of 1
 
     @property
-    def gain(self) -> Any:
-        """Return the gains, shape `(region,)`: `level` over the expected spread of a channel.
+    def size(self) -> Any:
+        """Return the root mean square of a component of the state of a unit by itself.
 
-        Of an uncoupled unit r^2 follows a normal law of mean a/b and variance s^2/b cut at 0.
+        Its r^2 follows a normal law of mean a/b and variance s^2/b cut at 0.
 
         Source: Fokker-Planck equation, e.g. Risken 1989 (from memory).
         """
         middle, spread = self.growth / SATURATION, self.noise / SATURATION**0.5
         ratio = middle / spread
         cut = jnp.exp(norm.logpdf(ratio) - norm.logcdf(ratio))
-        return self.level / jnp.sqrt((middle + spread * cut) / 2 + self.reading**2)
+        return jnp.sqrt((middle + spread * cut) / 2)
+
+    @property
+    def gain(self) -> Any:
+        """Return the gains, shape `(region,)`: `level` over the expected spread of a channel."""
+        return self.level / jnp.sqrt(self.size**2 + self.reading**2)
 
     @property
     def dynamics(self) -> NoisyParams:
@@ -160,17 +165,23 @@ def propose(net: Any, prior: encoders.Prior, values: Any, mask: Any) -> encoders
     return net(None, rows(values.astype(prior.law.mean.dtype)), rows(mask), prior)
 
 
-def filtered(params: Slice, values: Any, mask: Any, h: float, **options: Any) -> Any:
+def start_belief(params: Slice) -> likelihood.Gaussian:
+    """Return what is known of the first state: a rhythm of the usual size, at any phase.
+
+    One size for all parameters would favour those with states of that size.
+    """
+    return likelihood.wide_start((2, params.frequency.shape[0]), params.size)
+
+
+def filtered(params: Slice, values: Any, mask: Any, h: float) -> likelihood.Filtered:
     """Filter one recording: its likelihood, and residuals that are white if the model is right."""
-    start = likelihood.wide_start((2, values.shape[1]), 1.0)
-    return likelihood.gaussian_filter(
-        STEP, linear_readout, params, values, mask, h=h, start=start, **options
-    )
+    start = start_belief(params)
+    return likelihood.gaussian_filter(STEP, linear_readout, params, values, mask, h=h, start=start)
 
 
 def information(params: Slice, values: Any, mask: Any, h: float) -> Any:
     """Return what a recording says of the parameters, `(free, free)`."""
-    start = likelihood.wide_start((2, values.shape[1]), 1.0)
+    start = start_belief(params)
     return likelihood.filter_information(
         STEP, linear_readout, params, RULES, values, mask, h=h, start=start
     )
