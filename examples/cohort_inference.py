@@ -31,7 +31,6 @@ from oscillib.plots import plot_attention, plot_groups
 REGIONS = 3
 ROUND = 50  # training steps from checkpoint to checkpoint
 BATCH, DRAWS = 8, 8  # recordings in a step, and simulated slices with the gaps of each
-REFITS = 4  # of simulated recordings, for every slice
 NORMAL_90 = 1.6448536
 ASKED = ("coupling", "growth")
 LAGS = 12  # samples over which residuals must be white
@@ -73,7 +72,8 @@ def main(argv: list[str] | None = None) -> dict:
     network, training = train(data, rough, args)
     proposals = propose(network, rough, data)
     starts = np.asarray(proposals.law.mean, float)
-    refined = refine(prior, data, starts, key=jax.random.fold_in(jax.random.key(args.seed), 2))
+    key = jax.random.fold_in(jax.random.key(args.seed), 2)
+    refined = refine(prior, data, starts, args.refits, key=key)
     report = {
         "input": {
             "slices": len(data.names),
@@ -86,7 +86,7 @@ def main(argv: list[str] | None = None) -> dict:
         "training": training,
         "slices": describe_slices(data, prior, refined),
         "certificate": certify(data, prior, proposals, refined),
-        "answer": answer(data, prior, refined),
+        "answer": answer(data, prior, refined, args.refits),
     }
     (args.out / "report.json").write_text(json.dumps(report, indent=2, allow_nan=False) + "\n")
     draw(args.out, data, proposals, report)
@@ -102,11 +102,13 @@ def parse(argv: list[str] | None) -> argparse.Namespace:
     parser.add_argument("--effect", choices=("uncoupled", "damped"), default="uncoupled")
     parser.add_argument("--seed", type=int, default=0, help="of the tray and of the network")
     parser.add_argument("--rounds", type=int, default=20, help=f"of {ROUND} training steps")
+    parser.add_argument("--refits", type=int, default=4, help="to find the bias, for every slice")
     args = parser.parse_args(argv)
     if args.slices < 4:
         parser.error(f"--slices must be at least 4, two in each group; got {args.slices}")
-    if args.rounds < 1:
-        parser.error(f"--rounds must be at least 1; got {args.rounds}")
+    for name in ("rounds", "refits"):
+        if getattr(args, name) < 1:
+            parser.error(f"--{name} must be at least 1; got {getattr(args, name)}")
     return args
 
 
@@ -232,7 +234,9 @@ def propose(network: Any, prior: encoders.Prior, data: Slices) -> encoders.Propo
 # Refine -------------------------------------------------------------------------------------------
 
 
-def refine(prior: encoders.Prior, data: Slices, starts: np.ndarray, *, key: Any) -> Refined:
+def refine(
+    prior: encoders.Prior, data: Slices, starts: np.ndarray, refits: int, *, key: Any
+) -> Refined:
     """Climb the posterior of each recording from its proposal by Fisher scoring.
 
     What pulls back looks stronger in a short recording than it is, and the prior draws towards its
@@ -273,7 +277,7 @@ def refine(prior: encoders.Prior, data: Slices, starts: np.ndarray, *, key: Any)
         mask = jnp.asarray(data.mask[i])
         found = fit(jnp.asarray(starts[i]), jnp.asarray(data.values[i]), mask)
         errors = []
-        for each in jax.random.split(jax.random.fold_in(key, i), REFITS):
+        for each in jax.random.split(jax.random.fold_in(key, i), refits):
             free, values = again(found.free, mask, each)
             refit = fit(free, values, mask)
             errors.append(jnp.where(refit.status == 0, refit.free - free, jnp.nan))
@@ -339,14 +343,14 @@ def certify(data: Slices, prior: encoders.Prior, proposals: Any, refined: Refine
 # Answer -------------------------------------------------------------------------------------------
 
 
-def answer(data: Slices, prior: encoders.Prior, refined: Refined) -> dict:
+def answer(data: Slices, prior: encoders.Prior, refined: Refined, refits: int) -> dict:
     """Say what treatment changed: differences of group means, with intervals."""
     names = fitting.parameter_names(prior.template, model.RULES)
     means, out = {}, {}
     for name in ASKED:
         i = names.index(name)
         value = refined.free[:, i] - refined.bias[:, i]
-        variance = refined.covariance[:, i, i] * (1 + 1 / REFITS)
+        variance = refined.covariance[:, i, i] * (1 + 1 / refits)
         usable = converged(refined) & np.isfinite(value)
         for group, here in zip(GROUPS, (~data.treated, data.treated), strict=True):
             means[name, group] = group_mean(value[usable & here], variance[usable & here])
