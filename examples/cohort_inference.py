@@ -29,7 +29,7 @@ from oscillib.plots import plot_attention, plot_groups
 
 
 REGIONS = 3
-ROUND = 50  # training steps from checkpoint to checkpoint
+ROUND = 25  # training steps from checkpoint to checkpoint
 BATCH, DRAWS = 8, 8  # recordings in a step, and simulated slices with the gaps of each
 NORMAL_90 = 1.6448536
 ASKED = ("coupling", "growth")
@@ -101,7 +101,7 @@ def parse(argv: list[str] | None) -> argparse.Namespace:
     parser.add_argument("--slices", type=int, default=24, help="every second one is treated")
     parser.add_argument("--effect", choices=("uncoupled", "damped"), default="uncoupled")
     parser.add_argument("--seed", type=int, default=0, help="of the tray and of the network")
-    parser.add_argument("--rounds", type=int, default=20, help=f"of {ROUND} training steps")
+    parser.add_argument("--rounds", type=int, default=40, help=f"of {ROUND} training steps")
     parser.add_argument("--refits", type=int, default=4, help="to find the bias, for every slice")
     args = parser.parse_args(argv)
     if args.slices < 4:
@@ -167,6 +167,7 @@ def train(data: Slices, prior: encoders.Prior, args: Any) -> tuple[Any, dict]:
     """
     times = jnp.asarray(data.times, prior.law.mean.dtype)
     path, steps = args.out / "training.npz", ROUND * args.rounds
+    size = min(BATCH, len(data.mask))
 
     def loss(network, both):  # of one recording: the mean over slices simulated in its place
         mask, key = both
@@ -181,7 +182,7 @@ def train(data: Slices, prior: encoders.Prior, args: Any) -> tuple[Any, dict]:
     optimiser = optax.chain(
         optax.clip_by_global_norm(10.0), optax.adam(optax.cosine_decay_schedule(3e-3, steps))
     )
-    mean = cohort.mean_over_recordings(loss, cohort.recording_mesh(), group=BATCH)
+    mean = cohort.mean_over_recordings(loss, cohort.recording_mesh(), group=size)
 
     @jax.jit
     def update(network, memory, gradient):
@@ -202,7 +203,7 @@ def train(data: Slices, prior: encoders.Prior, args: Any) -> tuple[Any, dict]:
             saved = cohort.load_checkpoint(path, (network, memory, recent), key=key)
             (network, memory, recent), step, key, position, _ = saved
         stream = cohort.batches(
-            list(data.mask), size=BATCH, seed=args.seed, last="pad", position=position
+            list(data.mask), size=size, seed=args.seed, last="pad", position=position
         )
     except ValueError as problem:
         raise SystemExit(f"{problem}\nAnother run left it: choose another --out.") from problem
