@@ -281,8 +281,9 @@ def refine(
         for each in jax.random.split(jax.random.fold_in(key, i), refits):
             free, values = again(found.free, mask, each)
             refit = fit(free, values, mask)
-            errors.append(jnp.where(refit.status == 0, refit.free - free, jnp.nan))
-        bias = np.mean(errors, axis=0)
+            if converged(refit):
+                errors.append(refit.free - free)
+        bias = np.mean(errors, axis=0) if errors else found.bias
         return jax.device_get(found)._replace(bias=bias)
 
     found = [one(i) for i in tqdm(range(len(data.names)), desc="refine", unit="slice")]
@@ -314,7 +315,7 @@ def whiteness(data: Slices, refined: Refined) -> np.ndarray:
     return scipy.stats.chi2.sf(statistic, LAGS * REGIONS)
 
 
-def converged(refined: Refined) -> np.ndarray:
+def converged(refined: Refined) -> Any:
     return refined.status == int(fitting.Status.CONVERGED)
 
 
