@@ -54,8 +54,8 @@ class Results:
 
     def mean(self, row, size, measure):
         """Return the mean over seeds, or None where there is no such number."""
-        cells = [m.get((row, size), m.get((row, 0))) for m in self.merged]
-        if any(c is None or measure not in c for c in cells):
+        cells = [m.get((row, size), m.get((row, 0), {})) for m in self.merged]
+        if any(measure not in c for c in cells):
             return None
         return float(np.mean([c[measure] for c in cells]))
 

@@ -153,7 +153,7 @@ def refine(prior: encoders.Prior, free: Any, values: Any, mask: Any) -> Refined:
     begun = time.perf_counter()
     fit = jax.block_until_ready(refinement.refine(*given))
     seconds = (time.perf_counter() - begun) / len(free)
-    return Refined(*map(np.asarray, fit), seconds)
+    return Refined(**jax.device_get(fit)._asdict(), seconds=seconds)
 
 
 def refine_task(seed: int, settings: Settings) -> dict:

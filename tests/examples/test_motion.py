@@ -10,7 +10,7 @@ import numpy as np
 import pytest
 
 
-SCRIPT = pathlib.Path(__file__).parents[2] / "benchmarks" / "motion.py"
+SCRIPT = pathlib.Path(__file__).parents[2] / "benchmarks" / "motion"
 
 
 @pytest.mark.long

@@ -1,4 +1,4 @@
-"""Do parameters in one pass tell activities apart? `python benchmarks/motion.py`; extra `motion`.
+"""Do parameters in one pass tell activities apart? `python benchmarks/motion`; extra `motion`.
 
 The data: 80 recordings of a watch on the wrist, six channels (acceleration and turning rate, three
 axes each), 100 samples at 10 Hz, four activities with 20 recordings each, shipped with aeon.
@@ -43,8 +43,8 @@ import jax
 import jax.numpy as jnp
 import numpy as np
 import optax
-from _discriminant import judge
-from _motion_features import autoregressions, parameter_features, spectral_features
+from discriminant import judge
+from features import autoregressions, parameter_features, spectral_features
 
 from oscillib import encoders, fitting, likelihood, losses, recordings
 from oscillib.fields import HopfNetwork, HopfParams
