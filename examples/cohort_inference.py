@@ -23,7 +23,7 @@ import slice_model as model
 from group_comparison import LEVEL, change, compare, group_mean, interval, words
 from tqdm import tqdm
 
-from oscillib import cohort, encoders, fitting, losses, recordings
+from oscillib import cohort, encoders, evaluate, fitting, losses, recordings
 from oscillib.demo import Tray, tray
 from oscillib.plots import plot_attention, plot_groups
 
@@ -302,16 +302,10 @@ def intervals(prior: encoders.Prior, refined: Refined) -> tuple[Any, Any, Any]:
 
 
 def whiteness(data: Slices, refined: Refined) -> np.ndarray:
-    """Return a p-value a slice: small if the residuals of the filter hold a rhythm or a drift.
-
-    Source: Ljung and Box 1978 (from memory).
-    """
-    count = data.mask.sum(axis=1)
-    total = np.sum(refined.residuals**2, axis=1)
-    statistic = np.zeros(len(data.names))
-    for lag in range(1, LAGS + 1):
-        lagged = np.sum(refined.residuals[:, lag:] * refined.residuals[:, :-lag], axis=1)
-        statistic += np.sum(count * (count + 2) / (count - lag) * (lagged / total) ** 2, axis=1)
+    """Return a p-value a slice: small if the residuals of the filter hold a rhythm or a drift."""
+    test = jax.vmap(lambda r, m: evaluate.portmanteau(r, m, lags=LAGS).statistic)
+    # Channels are white on their own and do not know of each other: their statistics add up.
+    statistic = np.sum(test(jnp.asarray(refined.residuals), jnp.asarray(data.mask)), axis=1)
     return scipy.stats.chi2.sf(statistic, LAGS * REGIONS)
 
 

@@ -16,12 +16,11 @@ from oscillib.integrate import cut, gather, join, roll_windows
 
 BATCH = 16
 HIDDEN = 16
-WINDOW = 12  # hours, half a turn
+WINDOW = 8  # hours, a third of a turn
 WHOLE = slices.SEEN - 1
 REFRESHES = 3  # of the states where windows start, in one training
 RATE = 3e-3
-SPREAD = 0.1  # of a rolled-out reading about its sample: reading noise and half a day's noise
-POOLINGS = ("attention", "mean", "last")
+SPREAD = 0.1  # of a rolled-out reading about its sample: reading noise and a window's noise
 OPTIMISER = optax.inject_hyperparams(optax.adam)(learning_rate=0.0)
 
 

@@ -19,6 +19,7 @@ class Settings(NamedTuple):
     """How large the study is."""
 
     sizes: tuple[int, ...]
+    poolings: tuple[str, ...]
     rollout: int  # training steps
     simulated: int
     filter: int
@@ -28,8 +29,10 @@ class Settings(NamedTuple):
     starts: int
 
 
-FULL = Settings((75, 150, 300, 600, 1200), 300, 2500, 300, 300, 75, 25, 8)
-QUICK = Settings((75, 150), 40, 300, 20, 30, 10, 5, 2)
+FULL = Settings(
+    (75, 150, 300, 600, 1200), ("attention", "mean", "last"), 300, 2500, 300, 300, 75, 25, 8
+)
+QUICK = Settings((75, 150), ("attention", "last"), 40, 300, 20, 30, 10, 5, 2)
 DYNAMIC = np.array([0, 1, 2, 3, 4, 5, 6, 7, 9])  # growth, frequencies, coupling, level
 
 
@@ -102,7 +105,7 @@ def rollout_task(seed: int, settings: Settings) -> dict:
     prior, train, _, test, key = scene(seed, settings)
     values, mask = slices.beginning(test)
     found = {}
-    for pooling in proposals.POOLINGS:
+    for pooling in settings.poolings:
         for kind in ("windows", "whole"):
             for size in settings.sizes:
                 net = proposals.train(

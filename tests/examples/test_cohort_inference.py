@@ -38,6 +38,7 @@ def run(out, *arguments):
     return json.loads((out / "report.json").read_text())
 
 
+@pytest.mark.long  # 28 s; `.ci/run` runs the same
 def test_a_short_run_writes_all_that_it_promises(example, tmp_path, capsys):
     given = ["--out", str(tmp_path), "--slices", "4", "--rounds", "1", "--refits", "1"]
     with jax.numpy_dtype_promotion("standard"):  # optax's Adam mixes dtypes
