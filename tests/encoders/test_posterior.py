@@ -1,4 +1,4 @@
-"""Is a proposal that was trained on simulations calibrated, and what is refined from it?"""
+"""Calibration of a proposal that was trained on simulations, and of what is refined from it."""
 
 from typing import Any
 
