@@ -7,10 +7,12 @@ import runpy
 import jax
 import jax.numpy as jnp
 import numpy as np
+import pytest
 
 
 ROOT = pathlib.Path(__file__).parents[1]
-LOOP, OWN_FIELD = re.findall(r"```python\n(.*?)```", (ROOT / "README.md").read_text(), re.DOTALL)
+TEXT = (ROOT / "README.md").read_text()
+LOOP, OWN_FIELD, ENCODER = re.findall(r"```python\n(.*?)```", TEXT, re.DOTALL)
 
 
 def lines(text):
@@ -43,3 +45,14 @@ def test_field_of_ones_own_is_checked_and_fitted_within_forty_lines(capsys):
         assert abs(value - middle) < known.upper[name] - known.lower[name]
         assert known.upper[name] / known.lower[name] < 1.6
     assert capsys.readouterr().out.count("converged") == 2
+
+
+@pytest.mark.long
+def test_encoder_goes_on_from_the_field_of_ones_own(capsys):
+    with jax.numpy_dtype_promotion("standard"):
+        found = runpy.run_path(str(ROOT / "examples" / "own_field.py"))
+        exec(ENCODER, found)
+    # The entropy of the prior is what an untrained proposal scores on average.
+    assert found["value"] < found["prior"].law.entropy() - 1
+    assert abs(found["proposed"]["b"] / 2.5 - 1) < 0.3  # a standard deviation of the prior
+    assert "reading" in capsys.readouterr().out.splitlines()[-1]
