@@ -18,7 +18,7 @@ BATCH = 16
 HIDDEN = 16
 WINDOW = 8  # hours, a third of a turn
 WHOLE = slices.SEEN - 1
-REFRESHES = 3  # of the states where windows start, in one training
+REFRESHES = 2  # of the states where windows start, in one training
 RATE = 3e-3
 SPREAD = 0.1  # of a rolled-out reading about its sample: reading noise and a window's noise
 OPTIMISER = optax.inject_hyperparams(optax.adam)(learning_rate=0.0)

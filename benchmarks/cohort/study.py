@@ -30,9 +30,27 @@ class Settings(NamedTuple):
 
 
 FULL = Settings(
-    (75, 150, 300, 600, 1200), ("attention", "mean", "last"), 300, 2500, 300, 300, 75, 25, 8
+    sizes=(75, 150, 300, 600, 1200),
+    poolings=("attention", "mean", "last"),
+    rollout=200,
+    simulated=2500,
+    filter=200,
+    network=300,
+    refined=75,
+    several=25,
+    starts=8,
 )
-QUICK = Settings((75, 150), ("attention", "last"), 40, 300, 20, 30, 10, 5, 2)
+QUICK = Settings(
+    sizes=(75, 150),
+    poolings=("attention", "last"),
+    rollout=40,
+    simulated=300,
+    filter=20,
+    network=30,
+    refined=10,
+    several=5,
+    starts=2,
+)
 DYNAMIC = np.array([0, 1, 2, 3, 4, 5, 6, 7, 9])  # growth, frequencies, coupling, level
 
 
