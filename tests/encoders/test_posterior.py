@@ -63,7 +63,7 @@ def trained():
     with jax.numpy_dtype_promotion("standard"), jax.numpy_rank_promotion("allow"):
         prior = beliefs()
         keys = jax.random.split(jax.random.key(0), 6)
-        net = Encoder(
+        net: Any = Encoder(
             SampleMap(1, 8, key=keys[0]),
             Recurrence(8, 16, key=keys[1]),
             AttentionPool(32, heads=4, key=keys[2]),
