@@ -1,7 +1,7 @@
 """Learned inference over cohorts, against all that could stand in its place.
 
     python benchmarks/cohort            # an hour on 2 cores
-    python benchmarks/cohort --quick    # 3 minutes: one seed, two sizes, hardly any training
+    python benchmarks/cohort --quick    # 4 minutes: one seed, two sizes, hardly any training
 
 Cohorts of tissue slices (`slices.py`): six coupled noisy regions seen through a saturating response
 by 32 pixels, gaps included. Training cohorts of 75 to 1,200 recordings, a fresh test cohort of 75,
